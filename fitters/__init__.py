@@ -1,0 +1,1 @@
+"""Process models, their exact response to a logged output, and their estimation from it."""
