@@ -1,0 +1,1 @@
+"""The loop: controller equations, margins with exact dead time, closed-loop simulation."""

@@ -1,0 +1,116 @@
+"""Values of the tuning: what was asked, what came out."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+    from pipeline.findings import Caution
+    from pipeline.loop.types import Controller, Margins, Prediction
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Criteria:
+    """What the settings must keep; None switches a criterion off.
+
+    Attributes
+    ----------
+    phase_margin : float or None
+        At least this [degrees].
+    gain_margin : float or None
+        At least this, upwards, and at least its inverse downwards where the loop has a lower limit [1].
+    max_sensitivity : float or None
+        At most this [1].
+    overshoot : float or None
+        At most this on a set-point step [%].
+    percentile : float
+        Share of the plausible models below which the phase margin may fall short of
+        `percentile_phase_margin` [%].
+    percentile_phase_margin : float or None
+        Phase margin to hold at that percentile [degrees].
+    """
+
+    phase_margin: float | None = 60.0
+    gain_margin: float | None = 2.5
+    max_sensitivity: float | None = 1.8
+    overshoot: float | None = 10.0
+    percentile: float = 5.0
+    percentile_phase_margin: float | None = 45.0
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Tuning:
+    """Settings on the nominal model and what decided them.
+
+    Attributes
+    ----------
+    controller : Controller
+        Before any back-off for uncertainty.
+    margins : Margins
+    prediction : Prediction
+    binding : str
+        Criterion that set the gain: "phase_margin", "gain_margin", "max_sensitivity", "overshoot".
+    reached : bool
+        False when some criterion cannot be met at any gain; the settings then are the best reachable.
+    remarks : tuple of Caution
+        What the reader must know about how these settings came about.
+    """
+
+    controller: Controller
+    margins: Margins
+    prediction: Prediction
+    binding: str
+    reached: bool
+    remarks: tuple[Caution, ...]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Bands:
+    """The same controller on every plausible model: 5th, 50th and 95th percentiles.
+
+    Attributes
+    ----------
+    phase_margin, gain_margin, max_sensitivity, overshoot : tuple of 3 float
+        [degrees, 1, 1, %]; an unstable model counts as margin 0, GM 1, Ms inf, overshoot inf.
+    unstable_share : float
+        Share of plausible models the controller would lose [1].
+    t : (n,) ndarray
+        Grid of the step band [s].
+    low, high : (n,) ndarray
+        5th and 95th percentile of the unit set-point response [1].
+    """
+
+    phase_margin: tuple[float, float, float]
+    gain_margin: tuple[float, float, float]
+    max_sensitivity: tuple[float, float, float]
+    overshoot: tuple[float, float, float]
+    unstable_share: float
+    t: NDArray[np.float64]
+    low: NDArray[np.float64]
+    high: NDArray[np.float64]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class BackedOff:
+    """Settings after the back-off for uncertainty.
+
+    Attributes
+    ----------
+    controller : Controller
+    margins : Margins
+    prediction : Prediction
+    bands : Bands
+    factor : float
+        Factor applied to the gain, at most one [1].
+    """
+
+    controller: Controller
+    margins: Margins
+    prediction: Prediction
+    bands: Bands
+    factor: float
