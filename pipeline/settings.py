@@ -1,0 +1,356 @@
+"""The loop sheet: what the people on site know about the loop and the log does not say.
+
+Every key is optional and None means "not given". Nothing here is a default of the tuning;
+the stages that need a value choose it and say so.
+"""
+
+from __future__ import annotations
+
+import difflib
+import itertools
+import re
+import tomllib
+from pathlib import Path
+from typing import Annotated, Any, Literal
+
+from pydantic import BaseModel, ConfigDict, Field, ValidationError, model_validator
+
+from pipeline.errors import UsageError
+
+Duty = Literal["flow", "pressure", "level", "temperature", "composition", "speed", "position", "other"]
+TimeUnit = Literal["s", "ms", "min", "h"]
+Equation = Literal["standard", "series", "parallel"]
+IntegralEntry = Literal[
+    "seconds per repeat",
+    "minutes per repeat",
+    "repeats per minute",
+    "repeats per second",
+    "gain per second",
+    "gain per minute",
+]
+DerivativeEntry = Literal["seconds", "minutes", "gain in seconds", "gain in minutes"]
+
+_Positive = Annotated[float, Field(gt=0, allow_inf_nan=False)]
+_NotNegative = Annotated[float, Field(ge=0, allow_inf_nan=False)]
+_Finite = Annotated[float, Field(allow_inf_nan=False)]
+_Share = Annotated[float, Field(ge=0, le=1)]
+_Text = Annotated[str, Field(min_length=1)]
+#: A column by its header text, or by its position counted from 1.
+ColumnName = _Text | Annotated[int, Field(ge=1, strict=True)]
+
+
+class _Table(BaseModel):
+    """A table of the sheet: no unknown keys, nothing changes after reading."""
+
+    model_config = ConfigDict(frozen=True, extra="forbid")
+
+
+class LoopTable(_Table):
+    """[loop]: which loop this is."""
+
+    tag: _Text | None = None
+    service: _Text | None = None
+    duty: Duty = "other"
+
+
+class ColumnsTable(_Table):
+    """[columns]: which column of the log is which, by header text or position from 1."""
+
+    time: ColumnName | None = None
+    pv: ColumnName | None = None
+    co: ColumnName | None = None
+    sp: ColumnName | None = None
+    mode: ColumnName | None = None
+
+    @model_validator(mode="after")
+    def _distinct(self) -> ColumnsTable:
+        taken: dict[str | int, str] = {}
+        for key in ("time", "pv", "co", "sp", "mode"):
+            name = getattr(self, key)
+            if name is None:
+                continue
+            if name in taken:
+                raise ValueError(f"{taken[name]} and {key} name the same column, {name!r}.")
+            taken[name] = key
+        return self
+
+
+class TimeTable(_Table):
+    """[time]: how the log writes its times."""
+
+    format: _Text | None = None
+    unit: TimeUnit | None = None
+    zone: _Text | None = None
+    sample_s: _Positive | None = None
+
+    @model_validator(mode="after")
+    def _known_zone(self) -> TimeTable:
+        if self.zone is not None:
+            from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
+
+            try:
+                ZoneInfo(self.zone)
+            except (ZoneInfoNotFoundError, ValueError, OSError):
+                raise ValueError(
+                    f"zone {self.zone!r} is not a time zone name such as 'Europe/Berlin' or 'UTC'."
+                ) from None
+        return self
+
+
+class RangeTable(_Table):
+    """[pv] and [co]: unit and range of a signal."""
+
+    unit: _Text | None = None
+    low: _Finite | None = None
+    high: _Finite | None = None
+
+    @model_validator(mode="after")
+    def _ordered(self) -> RangeTable:
+        if (self.low is None) != (self.high is None):
+            raise ValueError("low and high are given together or not at all.")
+        if self.low is not None and self.high is not None and not self.low < self.high:
+            raise ValueError(f"low ({self.low:g}) must be below high ({self.high:g}).")
+        return self
+
+    @property
+    def span(self) -> float | None:
+        """Range width [unit], None if not given."""
+        return None if self.low is None or self.high is None else self.high - self.low
+
+
+class ControllerTable(_Table):
+    """[controller]: the controller's own equation and how its settings are entered."""
+
+    kind: Literal["P", "I", "PI", "PD", "PID"] | None = None
+    equation: Equation | None = None
+    action: Literal["reverse", "direct"] | None = None
+    proportional: Literal["gain", "band"] | None = None
+    proportional_basis: Literal["span", "engineering"] | None = None
+    integral: IntegralEntry | None = None
+    derivative: DerivativeEntry | None = None
+    derivative_filter_s: _NotNegative | None = None
+    derivative_filter_ratio: _Positive | None = None
+    setpoint_weight: _Share | None = None
+    derivative_setpoint_weight: _Share | None = None
+    scan_s: _NotNegative | None = None
+    compute_delay_s: _NotNegative | None = None
+    pv_filter_s: _NotNegative | None = None
+
+    @model_validator(mode="after")
+    def _one_filter(self) -> ControllerTable:
+        if self.derivative_filter_s is not None and self.derivative_filter_ratio is not None:
+            raise ValueError("give derivative_filter_s or derivative_filter_ratio, not both.")
+        return self
+
+
+class AsFoundTable(_Table):
+    """[as_found]: the settings before the work, in the controller's entry units."""
+
+    proportional: _Positive | None = None
+    integral: _NotNegative | None = None
+    derivative: _NotNegative | None = None
+
+
+class CriteriaTable(_Table):
+    """[criteria]: what the settings must keep."""
+
+    phase_margin_deg: Annotated[float, Field(gt=0, lt=180)] | None = None
+    gain_margin: Annotated[float, Field(gt=1, allow_inf_nan=False)] | None = None
+    max_sensitivity: Annotated[float, Field(gt=1, allow_inf_nan=False)] | None = None
+    overshoot_pct: Annotated[float, Field(ge=0, allow_inf_nan=False)] | None = None
+    percentile: Annotated[float, Field(gt=0, lt=50)] | None = None
+    percentile_phase_margin_deg: Annotated[float, Field(gt=0, lt=180)] | None = None
+
+    @model_validator(mode="after")
+    def _percentile_below(self) -> CriteriaTable:
+        asked, held = self.phase_margin_deg, self.percentile_phase_margin_deg
+        if asked is not None and held is not None and held > asked:
+            raise ValueError(
+                f"percentile_phase_margin_deg ({held:g}) must not be above phase_margin_deg ({asked:g})."
+            )
+        return self
+
+
+class LimitsTable(_Table):
+    """[limits]: what lies near the working point."""
+
+    pv_low_alarm: _Finite | None = None
+    pv_high_alarm: _Finite | None = None
+    pv_low_trip: _Finite | None = None
+    pv_high_trip: _Finite | None = None
+    co_low: _Finite | None = None
+    co_high: _Finite | None = None
+
+    @model_validator(mode="after")
+    def _ordered(self) -> LimitsTable:
+        order = ("pv_low_trip", "pv_low_alarm", "pv_high_alarm", "pv_high_trip")
+        given = [(name, getattr(self, name)) for name in order if getattr(self, name) is not None]
+        for (name, value), (above, limit) in itertools.pairwise(given):
+            # an alarm may sit on its trip, but a low limit must be below a high one
+            if value > limit or (value == limit and name.split("_")[1] != above.split("_")[1]):
+                raise ValueError(f"{name} ({value:g}) must be below {above} ({limit:g}).")
+        if self.co_low is not None and self.co_high is not None and not self.co_low < self.co_high:
+            raise ValueError(f"co_low ({self.co_low:g}) must be below co_high ({self.co_high:g}).")
+        return self
+
+
+class PeopleTable(_Table):
+    """[people]: who signs."""
+
+    tested_by: _Text | None = None
+    checked_by: _Text | None = None
+    approved_by: _Text | None = None
+
+
+class ReferencesTable(_Table):
+    """[references]: the papers this work hangs on."""
+
+    loop_drawing: _Text | None = None
+    permit: _Text | None = None
+    change_number: _Text | None = None
+    valve_test: _Text | None = None
+    loop_check: _Text | None = None
+
+
+class LoopSheet(_Table):
+    """The whole sheet; ``LoopSheet()`` is a sheet on which nothing was filled in.
+
+    Attributes
+    ----------
+    loop, columns, time, pv, co, controller, as_found, criteria, limits, people, references
+        One frozen table each; a key that was not given is None.
+    """
+
+    loop: LoopTable = LoopTable()
+    columns: ColumnsTable = ColumnsTable()
+    time: TimeTable = TimeTable()
+    pv: RangeTable = RangeTable()
+    co: RangeTable = RangeTable()
+    controller: ControllerTable = ControllerTable()
+    as_found: AsFoundTable = AsFoundTable()
+    criteria: CriteriaTable = CriteriaTable()
+    limits: LimitsTable = LimitsTable()
+    people: PeopleTable = PeopleTable()
+    references: ReferencesTable = ReferencesTable()
+
+
+def load_sheet(path: str | Path) -> LoopSheet:
+    """Read a loop sheet.
+
+    Parameters
+    ----------
+    path : str or Path
+        A TOML file, UTF-8.
+
+    Returns
+    -------
+    LoopSheet
+        The sheet, checked.
+
+    Raises
+    ------
+    UsageError
+        If the file is missing, is not TOML (with the line), or holds an unknown key, a
+        value of the wrong kind or values that contradict each other.
+    """
+    path = Path(path)
+    try:
+        raw = path.read_bytes()
+    except OSError as error:
+        reason = "there is no such file" if not path.exists() else (error.strerror or "it cannot be opened")
+        raise UsageError(
+            f"The loop sheet cannot be read: {reason}.",
+            file=str(path),
+            remedy="Check the path given with --loop.",
+        ) from None
+    try:
+        text = raw.decode("utf-8-sig").replace("\r\n", "\n")
+    except UnicodeDecodeError as error:
+        raise UsageError(
+            "The loop sheet is not UTF-8 text.",
+            file=path.name,
+            line=raw[: error.start].count(b"\n") + 1,
+            remedy="Save it as UTF-8.",
+        ) from None
+    try:
+        tables = tomllib.loads(text)
+    except tomllib.TOMLDecodeError as error:
+        raise _bad_toml(error, text, path.name) from None
+    try:
+        return LoopSheet.model_validate(tables)
+    except ValidationError as error:
+        raise _explain(error, tables, text, path.name) from None
+
+
+def _bad_toml(error: tomllib.TOMLDecodeError, text: str, file: str) -> UsageError:
+    found = re.search(r"\(at line (\d+), column (\d+)\)", str(error))
+    line = int(found[1]) if found else text.count("\n") + 1
+    what = re.sub(r"\s*\(at [^)]*\)", "", str(error)).rstrip(".")
+    return UsageError(
+        f"The loop sheet is not valid TOML: {what}.",
+        file=file,
+        line=line,
+        column=int(found[2]) if found else None,
+        remedy='Text goes in quotation marks, like tag = "TIC-101"; a table starts with its [name].',
+    )
+
+
+def _line_of(text: str, place: tuple[str, ...]) -> int | None:
+    """Find the line on which a key stands, None where it is written some other way."""
+    table = ""
+    for number, line in enumerate(text.split("\n"), start=1):
+        heading = re.match(r"\s*\[\s*([\w.-]+)\s*\]", line)
+        if heading:
+            table = heading[1]
+            if len(place) == 1 and table == place[0]:
+                return number
+        key = re.match(r"\s*\"?([\w-]+)\"?\s*=", line)
+        if key and (*([table] if table else []), key[1]) == place:
+            return number
+    return None
+
+
+def _explain(error: ValidationError, tables: dict[str, Any], text: str, file: str) -> UsageError:
+    """Turn the first thing the check found into a sentence with its place."""
+    details = error.errors(include_url=False)
+    fault = next((d for d in details if d["type"] == "extra_forbidden"), details[0])
+    # a union reports one fault a branch, each with the branch's name at the end of its place
+    place = tuple(str(part) for part in fault["loc"][:2])
+    dotted = f"[{place[0]}] {place[1]}" if len(place) > 1 else f"[{place[0]}]" if place else "the sheet"
+    line = _line_of(text, place) if place else None
+    if fault["type"] == "extra_forbidden":
+        known = _known(place)
+        near = difflib.get_close_matches(place[-1], known, n=1, cutoff=0.5)
+        kind = "table" if len(place) == 1 and isinstance(tables.get(place[0]), dict) else "key"
+        remedy = f'Did you mean "{near[0]}"?' if near else f"Known here: {', '.join(known)}."
+        return UsageError(
+            f'The loop sheet has an unknown {kind} "{place[-1]}" in {dotted.split(" ")[0]}.'
+            if kind == "key" and len(place) > 1
+            else f'The loop sheet has an unknown {kind} "{place[-1]}".',
+            file=file,
+            line=line,
+            remedy=remedy,
+        )
+    if fault["type"] == "value_error":
+        return UsageError(f"{dotted}: {fault['ctx']['error']}", file=file, line=line)
+    if fault["type"] == "literal_error":
+        given = str(fault["input"])
+        options = [o.strip("' ") for o in re.split(r", | or ", fault["ctx"]["expected"])]
+        near = difflib.get_close_matches(given, options, n=1, cutoff=0.5)
+        hint = f' Did you mean "{near[0]}"?' if near else ""
+        return UsageError(
+            f'{dotted} cannot be "{given}".',
+            file=file,
+            line=line,
+            remedy=f"It is one of {', '.join(options)}.{hint}",
+        )
+    what = fault["msg"].removeprefix("Input ")
+    return UsageError(f"{dotted} = {fault['input']!r}: the value {what}.", file=file, line=line)
+
+
+def _known(place: tuple[str, ...]) -> list[str]:
+    if len(place) == 1:
+        return list(LoopSheet.model_fields)
+    table = LoopSheet.model_fields[place[0]].annotation
+    assert isinstance(table, type) and issubclass(table, BaseModel)
+    return list(table.model_fields)
