@@ -6,12 +6,13 @@ import json
 import re
 import subprocess
 import sys
-import tomllib
 from pathlib import Path
 
 import numpy as np
 import pytest
 from scipy import signal
+
+from pipeline.settings import load_sheet
 
 DEMO_LOGS = Path(__file__).parents[2] / "demo_logs"
 SCRIPT = DEMO_LOGS / "make_logs.py"
@@ -102,5 +103,22 @@ def test_sizes_are_a_loggers():
 def test_every_log_has_a_loop_sheet_with_its_tag():
     truth = json.loads((DEMO_LOGS / "truth.json").read_text(encoding="utf-8"))
     for name, entry in truth.items():
-        sheet = tomllib.loads((DEMO_LOGS / f"{name}.toml").read_text(encoding="utf-8"))
-        assert sheet["loop"]["tag"] == entry["tag"]
+        assert load_sheet(DEMO_LOGS / f"{name}.toml").loop.tag == entry["tag"]
+
+
+def test_sheets_enter_settings_in_many_ways():
+    sheets = [load_sheet(path).controller for path in DEMO_LOGS.glob("*.toml")]
+    assert {s.equation for s in sheets} == {"standard", "series", "parallel"}
+    assert {(s.proportional, s.proportional_basis) for s in sheets} >= {
+        ("gain", "span"),
+        ("gain", "engineering"),
+        ("band", "span"),
+    }
+    assert len({s.integral for s in sheets}) >= 4
+
+
+@pytest.mark.parametrize("demo", make_logs.DEMOS, **names)
+def test_action_in_the_sheet_suits_the_sign_of_the_process(demo):
+    rising = demo.truth.numerator[-1] > 0  # once the inverse response is over
+    action = load_sheet(DEMO_LOGS / f"{demo.name}.toml").controller.action
+    assert action == ("reverse" if rising else "direct")
