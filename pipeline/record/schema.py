@@ -208,6 +208,7 @@ class ControllerInfo(Part):
     derivative_setpoint_weight: Number
     pv_filter_s: Number
     scan_s: Number
+    compute_delay_s: Number = 0.0
     as_entered: dict[str, Entered]
 
 

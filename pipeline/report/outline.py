@@ -1,0 +1,235 @@
+"""Record to outline: what a report says and in which order, decided once for every form.
+
+A section is one function in `_WITH_SETTINGS` or `_WITHHELD`; it gives None when the record
+holds nothing for it.
+"""
+
+from __future__ import annotations
+
+import hashlib
+from collections.abc import Callable, Mapping
+
+from pipeline.findings import SEVERITY
+from pipeline.record import CautionInfo, Entered, Record, to_json
+from pipeline.report import numbers
+from pipeline.report.content import (
+    Block,
+    Fact,
+    Facts,
+    Notice,
+    Notices,
+    Outline,
+    Prose,
+    Section,
+    Signature,
+    Signatures,
+    Steps,
+    Table,
+)
+from pipeline.report.evidence import model, provenance, test
+from pipeline.report.performance import margins, prediction
+
+_HEADLINES = {
+    "ready": "Settings are ready to enter.",
+    "ready with cautions": "Settings are ready to enter, with the cautions below.",
+    "withheld": "Settings are withheld: this test does not support a gain.",
+}
+
+#: Roles of the sign-off block and where the loop sheet names them.
+_ROLES = (("Tested", "tested_by"), ("Checked", "checked_by"), ("Approved", "approved_by"))
+
+#: References of the loop sheet that belong on a signed page.
+_REFERENCES = (
+    ("Loop drawing", "loop_drawing"),
+    ("Permit", "permit"),
+    ("Change number", "change_number"),
+    ("Valve test", "valve_test"),
+    ("Loop check", "loop_check"),
+)
+
+#: What one bump can never tell, whatever its quality (common practice).
+_NEVER_ASSESSED = (
+    "other operating points, loads and products",
+    "wear of the final controlling element and of the sensor",
+    "interaction with other loops",
+    "control while an output or rate limit is active, start-up and shut-down",
+    "whether the clocks of PV and CO agree, and filters that nobody recorded",
+    "safety functions, alarms and trips",
+)
+
+
+def build_outline(record: Record) -> Outline:
+    """Decide what the report on a record says.
+
+    Parameters
+    ----------
+    record : Record
+
+    Returns
+    -------
+    Outline
+        The cautions stand first; a withheld record leads with its cause and what to do next.
+    """
+    sections = _WITHHELD if record.verdict == "withheld" else _WITH_SETTINGS
+    built = (section(record) for section in sections)
+    return Outline(
+        title="Controller settings from a bump test",
+        tag=_sheet(record, "loop", "tag"),
+        service=_sheet(record, "loop", "service"),
+        verdict=record.verdict,
+        headline=_HEADLINES[record.verdict],
+        summary=_summary(record),
+        sections=tuple(s for s in built if s is not None),
+        created=record.made.created,
+        record_hash=hashlib.sha256(to_json(record).encode()).hexdigest(),
+    )
+
+
+def _sheet(record: Record, table: str, key: str) -> str:
+    rows = record.loop.get(table)
+    value = rows.get(key) if isinstance(rows, dict) else None
+    return numbers.NOT_GIVEN if value in (None, "") else str(value)
+
+
+def _summary(record: Record) -> tuple[Fact, ...]:
+    if record.controller is None or record.margins is None or record.prediction is None:
+        stops = [c for c in record.cautions if c.level == "stop"]
+        return tuple(Fact(label="Cause", text=c.text) for c in stops)
+    rows = _entries(record.controller.as_entered)
+    rows.append(Fact(label="Controller", text=f"{record.controller.kind}, {record.controller.action} acting"))
+    return tuple(rows)
+
+
+def _entries(entered: Mapping[str, Entered]) -> list[Fact]:
+    return [Fact(label=_sentence(name), text=_entry(entry)) for name, entry in entered.items()]
+
+
+def _entry(entry: Entered) -> str:
+    """Show a setting to the last digit it has: it is typed in as it stands here."""
+    number = entry.value if isinstance(entry.value, str) else f"{entry.value:.10g}"
+    return f"{number} {entry.unit}".strip()
+
+
+def _sentence(name: str) -> str:
+    words = name.replace("_", " ")
+    return words[:1].upper() + words[1:]
+
+
+def _cautions(record: Record) -> Section | None:
+    ordered = sorted(record.cautions, key=lambda c: SEVERITY[c.level])
+    if not ordered:
+        return None
+    return Section(key="cautions", title="Cautions", blocks=(Notices(items=tuple(map(_notice, ordered))),))
+
+
+def _notice(caution: CautionInfo) -> Notice:
+    parts = []
+    if caution.value is not None:
+        parts.append(f"observed {numbers.plain(caution.value)}")
+    if caution.limit is not None:
+        parts.append(f"limit {numbers.plain(caution.limit)}")
+    return Notice(level=caution.level, text=caution.text, measure=", ".join(parts))
+
+
+def _settings(record: Record) -> Section | None:
+    c = record.controller
+    if c is None:
+        return None
+    blocks: list[Block] = [
+        Table(
+            title="As entered in the controller",
+            head=("Setting", "Enter"),
+            rows=tuple((f.label, f.text) for f in _entries(c.as_entered)),
+            numeric=(False, True),
+        ),
+        Facts(
+            rows=(
+                Fact(label="Action", text=record.action_words or c.action, note="check before automatic"),
+                Fact(label="Controller's equation", text=c.equation),
+            )
+        ),
+        Table(
+            title="The same in the standard equation",
+            head=("Setting", "Value"),
+            rows=_standard_rows(record),
+            numeric=(False, True),
+        ),
+    ]
+    if record.as_found is not None:
+        found = record.as_found
+        rows = [(f.label, f.text) for f in _entries(found.as_entered)]
+        if found.margins is not None:
+            rows.append(("Phase margin on this model", f"{numbers.plain(found.margins.phase_margin_deg)}°"))
+            rows.append(("Maximum sensitivity Ms", numbers.plain(found.margins.max_sensitivity)))
+        if found.overshoot_pct is not None:
+            rows.append(("Predicted overshoot", numbers.percent(found.overshoot_pct)))
+        blocks.append(
+            Table(
+                title="As found, and the settings to go back to",
+                head=("Setting", "Value"),
+                rows=tuple(rows),
+                numeric=(False, True),
+            )
+        )
+    return Section(key="settings", title="Settings", blocks=tuple(blocks))
+
+
+def _standard_rows(record: Record) -> tuple[tuple[str, str], ...]:
+    c = record.controller
+    assert c is not None
+    series = record.series
+    rows = [("Gain", numbers.plain(c.gain, digits=4, unit=c.gain_unit))]
+    if c.gain_unit == "%/%" and (series.pv_unit, series.co_unit) != ("%", "%"):
+        unit = f"{series.co_unit or 'CO unit'} per {series.pv_unit or 'PV unit'}"
+        rows.append(("Gain in the log's units", numbers.plain(c.gain_engineering, digits=4, unit=unit)))
+    rows.append(("Integral time", numbers.plain(c.integral_s, digits=4, unit="s")))
+    rows.append(("Derivative time", numbers.plain(c.derivative_s, digits=4, unit="s")))
+    if c.derivative_s > 0:
+        rows.append(("Derivative filter", numbers.plain(c.filter_s, digits=4, unit="s")))
+    rows.append(("Set-point weight", numbers.plain(c.setpoint_weight)))
+    rows.append(("PV filter", numbers.plain(c.pv_filter_s, unit="s")))
+    rows.append(("Scan", numbers.plain(c.scan_s, unit="s") if c.scan_s > 0 else "continuous"))
+    return tuple(rows)
+
+
+def _next_steps(record: Record) -> Section | None:
+    if not record.next_steps:
+        return None
+    return Section(key="next", title="What to do next", blocks=(Steps(items=record.next_steps),))
+
+
+def _not_assessed(record: Record) -> Section:
+    rises = {move.to > move.from_ for bump in record.bumps if bump.used for move in bump.moves}
+    unknown = _NEVER_ASSESSED if len(rises) > 1 else (*_NEVER_ASSESSED, "moves of the CO the other way")
+    said = f"The test cannot tell, and this report does not assess: {'; '.join(unknown)}."
+    return Section(key="not-assessed", title="What was not assessed", blocks=(Prose(text=said),))
+
+
+def _sign_off(record: Record) -> Section:
+    papers = tuple(Fact(label=label, text=_sheet(record, "references", key)) for label, key in _REFERENCES)
+    rows = tuple(Signature(role=role, name=_sheet(record, "people", key)) for role, key in _ROLES)
+    return Section(key="sign-off", title="Sign-off", blocks=(Facts(rows=papers), Signatures(rows=rows)))
+
+
+_WITH_SETTINGS: tuple[Callable[[Record], Section | None], ...] = (
+    _cautions,
+    _settings,
+    margins,
+    prediction,
+    _next_steps,
+    test,
+    model,
+    _not_assessed,
+    provenance,
+    _sign_off,
+)
+
+_WITHHELD: tuple[Callable[[Record], Section | None], ...] = (
+    _cautions,
+    _next_steps,
+    test,
+    model,
+    _not_assessed,
+    provenance,
+    _sign_off,
+)
