@@ -76,7 +76,7 @@ def _bump_table(record: Record) -> Table:
         title="Bumps",
         head=("Bump", f"From [{unit}]", f"To [{unit}]", f"CO moves [{co}]", "Used"),
         rows=tuple(_bump_row(i, b, scale) for i, b in enumerate(record.bumps, start=1)),
-        numeric=(True, True, True, False, False),
+        numeric=(False, True, True, False, False),
     )
 
 

@@ -92,6 +92,7 @@ def _slim(text: str) -> str:
     text = re.sub(r"<!--.*?-->", "", text, flags=re.DOTALL)
     used = set(re.findall(r"#([\w.-]+)", text))
     text = re.sub(r' id="([\w.-]+)"', lambda m: m[0] if m[1] in used else "", text)
+    text = re.sub(r"font-family: [^;\"]+;? ?", "", text)
     text = re.sub(r"font: ([\d.]+)px [^;\"]+", r"font-size: \1px", text)
     text = re.sub(r"-?\d+\.\d{3,}", lambda m: f"{float(m[0]):.2f}".rstrip("0").rstrip("."), text)
     return re.sub(r"\n\s*", "\n", text).strip() + "\n"
@@ -135,7 +136,7 @@ def _log(record: Record) -> Figure:
     t = np.asarray(series.t_s) / scale
     pv_unit, co_unit = series.pv_unit or "PV unit", series.co_unit or "CO unit"
     fitted = series.fitted is not None and series.residual is not None
-    figure = Figure(figsize=(_WIDTH, 4.4 if fitted else 3.4))
+    figure = Figure(figsize=(_WIDTH, 4.0 if fitted else 3.1))
     figure.subplots_adjust(left=0.085, right=0.985, top=0.94, bottom=0.11)
     axes = _axes_of(figure, (3.0, 1.1, 1.2) if fitted else (3.0, 1.2))
     upper, lower = axes[0], axes[-1]
@@ -152,7 +153,7 @@ def _log(record: Record) -> Figure:
         middle.plot(t, _gappy(series.residual), color=MEASURED, linewidth=0.7)
         middle.axhline(0.0, color=INK, linewidth=0.6)
         middle.locator_params(axis="y", nbins=4)
-        _name_axis(middle, f"left over [{pv_unit}]")
+        _name_axis(middle, f"residual [{pv_unit}]")
     lower.step(t, series.co, where="post", color=OUTPUT, linewidth=1.2)
     lower.margins(y=0.15)
     lower.locator_params(axis="y", nbins=4)
@@ -191,7 +192,7 @@ def _step(record: Record) -> Figure:
     end = _interesting_end(record)
     scale, unit = numbers.time_unit(end)
     t = np.asarray(response.t_s) / scale
-    figure = Figure(figsize=(_WIDTH, 3.7))
+    figure = Figure(figsize=(_WIDTH, 3.1))
     figure.subplots_adjust(left=0.085, right=0.985, top=0.92, bottom=0.13)
     upper, lower = _axes_of(figure, (2.6, 1.3))
     if response.low is not None and response.high is not None:
@@ -225,7 +226,7 @@ def _loop(record: Record) -> Figure:
     assert record.margins is not None
     omega = _grid(record)
     response = _loop_response(record, omega)
-    figure = Figure(figsize=(_WIDTH, 3.5))
+    figure = Figure(figsize=(_WIDTH, 3.2))
     grid = figure.add_gridspec(
         2,
         2,
@@ -314,15 +315,13 @@ def _bode(
         )
     if math.isfinite(m.phase_crossover) and math.isfinite(m.gain_margin):
         magnitude.plot([m.phase_crossover] * 2, [1.0 / m.gain_margin, 1.0], color=OUTPUT, linewidth=1.2)
-        crowded = m.phase_crossover > math.sqrt(omega[0] * omega[-1])
         magnitude.text(
-            m.phase_crossover * (0.9 if crowded else 1.1),
-            1.0 / math.sqrt(m.gain_margin),
+            1.15 * m.phase_crossover,
+            1.0,
             f"gain margin {numbers.plain(m.gain_margin, digits=2)}",
             fontsize=8,
             color=OUTPUT,
-            ha="right" if crowded else "left",
-            va="center",
+            va="bottom",
         )
     phase.set_ylim(-300.0, 0.0)
     phase.set_yticks([-270, -180, -90, 0])
@@ -351,7 +350,7 @@ def _grid(record: Record) -> NDArray[np.float64]:
     known += [w for w in (m.gain_crossover, m.phase_crossover) if math.isfinite(w) and w > 0]
     if not known:  # the loop never crosses: its response time gives the scale
         known = [2.0 / record.prediction.rise_s if math.isfinite(record.prediction.rise_s) else 1.0]
-    return np.geomspace(min(known) / 12.0, max(known) * 5.0, _FREQUENCIES)
+    return np.geomspace(min(known) / 10.0, max(known) * 14.0, _FREQUENCIES)
 
 
 def _loop_response(record: Record, omega: NDArray[np.float64]) -> NDArray[np.complex128]:

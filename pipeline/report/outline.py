@@ -27,7 +27,7 @@ from pipeline.report.content import (
     Table,
 )
 from pipeline.report.evidence import model, provenance, test
-from pipeline.report.performance import margins, prediction
+from pipeline.report.performance import degrees, margins, overshoot, prediction
 
 _HEADLINES = {
     "ready": "Settings are ready to enter.",
@@ -97,6 +97,8 @@ def _summary(record: Record) -> tuple[Fact, ...]:
         return tuple(Fact(label="Cause", text=c.text) for c in stops)
     rows = _entries(record.controller.as_entered)
     rows.append(Fact(label="Controller", text=f"{record.controller.kind}, {record.controller.action} acting"))
+    rows.append(Fact(label="Phase margin", text=degrees(record.margins.phase_margin_deg)))
+    rows.append(Fact(label="Predicted overshoot", text=overshoot(record, record.prediction)))
     return tuple(rows)
 
 
@@ -140,7 +142,7 @@ def _settings(record: Record) -> Section | None:
             title="As entered in the controller",
             head=("Setting", "Enter"),
             rows=tuple((f.label, f.text) for f in _entries(c.as_entered)),
-            numeric=(False, True),
+            numeric=(False, False),
         ),
         Facts(
             rows=(
@@ -152,7 +154,7 @@ def _settings(record: Record) -> Section | None:
             title="The same in the standard equation",
             head=("Setting", "Value"),
             rows=_standard_rows(record),
-            numeric=(False, True),
+            numeric=(False, False),
         ),
     ]
     if record.as_found is not None:
@@ -168,7 +170,7 @@ def _settings(record: Record) -> Section | None:
                 title="As found, and the settings to go back to",
                 head=("Setting", "Value"),
                 rows=tuple(rows),
-                numeric=(False, True),
+                numeric=(False, False),
             )
         )
     return Section(key="settings", title="Settings", blocks=tuple(blocks))

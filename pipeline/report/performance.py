@@ -18,7 +18,10 @@ _CRITERIA = {
 
 #: A margin is the model's own, not a measurement: it is shown at least to this share of
 #: itself, so that a criterion just missed never reads as met.
-_READING = 0.02
+_READING = 0.035
+
+#: An overshoot is shown at least to this [%]: nobody reads less off a trend.
+_OVERSHOOT_READING = 0.5
 
 
 def margins(record: Record) -> Section | None:
@@ -29,7 +32,7 @@ def margins(record: Record) -> Section | None:
     blocks.append(Facts(rows=_further_margins(record)))
     alt = (
         f"Frequency response of the loop. Gain crossover at {_per_second(record.margins.gain_crossover)}, "
-        f"phase margin {_degrees(record.margins.phase_margin_deg)}, gain margin "
+        f"phase margin {degrees(record.margins.phase_margin_deg)}, gain margin "
         f"{numbers.plain(record.margins.gain_margin)}, maximum sensitivity "
         f"{numbers.plain(record.margins.max_sensitivity)}."
     )
@@ -44,7 +47,7 @@ def _margin_table(record: Record) -> Table:
         _row(
             "Phase margin",
             "°",
-            f"at least {_degrees(asked.phase_margin_deg)}" if asked.phase_margin_deg else None,
+            f"at least {degrees(asked.phase_margin_deg)}" if asked.phase_margin_deg else None,
             m.phase_margin_deg,
             b.phase_margin_deg if b else None,
         ),
@@ -90,7 +93,8 @@ def _row(
         return name, wanted, _with(numbers.plain(reached), unit), "not computed"
     half = numbers.half_width(band[1], band[0], band[2])
     ends = _with(numbers.bounds(band[0], band[2], half), unit)
-    shown = numbers.rounded(reached, min(half, _READING * abs(reached)))
+    finest = _READING * abs(reached)
+    shown = numbers.rounded(reached, min(half, max(finest, _OVERSHOOT_READING) if unit == " %" else finest))
     return name, wanted, _with(shown, unit), ends
 
 
@@ -143,7 +147,8 @@ def _per_second(omega: float) -> str:
     return "none" if math.isinf(omega) else numbers.plain(omega, unit="rad/s")
 
 
-def _degrees(angle: float) -> str:
+def degrees(angle: float) -> str:
+    """Write an angle, infinity in words."""
     return _with(numbers.plain(angle), "°")
 
 
@@ -154,7 +159,7 @@ def prediction(record: Record) -> Section | None:
         return None
     pv, co = record.series.pv_unit or "PV unit", record.series.co_unit or "CO unit"
     rows = [
-        Fact(label="Overshoot", text=_overshoot(record, p), note="of the set-point change"),
+        Fact(label="Overshoot", text=overshoot(record, p), note="of the set-point change"),
         *_first_peak(p),
         Fact(label="Rise time, 10 to 90 %", text=numbers.duration(p.rise_s, never="never")),
         Fact(label="Settled within 5 %", text=numbers.duration(p.settling_s, never="never")),
@@ -176,7 +181,7 @@ def prediction(record: Record) -> Section | None:
             name="step",
             title="Predicted set-point step",
             alt="Predicted response of PV and CO to a unit set-point step. "
-            f"Overshoot {_overshoot(record, p)}; rise time {numbers.duration(p.rise_s, never='endless')}.",
+            f"Overshoot {overshoot(record, p)}; rise time {numbers.duration(p.rise_s, never='endless')}.",
         ),
         Prose(
             text="The prediction is of a linear model without limits, sticking or noise. "
@@ -186,7 +191,8 @@ def prediction(record: Record) -> Section | None:
     return Section(key="prediction", title="Predicted response", blocks=tuple(blocks))
 
 
-def _overshoot(record: Record, p: PredictionInfo) -> str:
+def overshoot(record: Record, p: PredictionInfo) -> str:
+    """Write the predicted overshoot with its 5 to 95 % band."""
     if record.bands is None:
         return numbers.percent(p.overshoot_pct)
     low, middle, high = record.bands.overshoot_pct
