@@ -7,11 +7,12 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from fitters.estimate import Problem, fit_structure
+from fitters.estimate import Screened, as_screened, screen, settle
 from fitters.fit import Candidate, Choice
 from fitters.intervals import to_fit
-from fitters.noise import colour, outliers, whitened_sum
-from fitters.structures import all_structures
+from fitters.noise import colour, covariance, outliers, whitened_sum
+from fitters.problem import Problem
+from fitters.structures import all_structures, structure_named
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -24,6 +25,11 @@ if TYPE_CHECKING:
 _DRIFT_SURE = 2.0
 #: Candidates with less weight than this are listed but not refined further [1].
 _WEIGHT_THAT_COUNTS = 0.01
+#: At least this many structures are settled from several starts, and all within this distance.
+_CONTENDERS = 3
+_CONTENDER_DISTANCE = 12.0
+#: A drift that moves the PV by less than this share of its range is arithmetic [1].
+_DRIFT_SEEN = 1e-5
 #: Residuals below this share of the PV's range are arithmetic, not noise [1].
 _ARITHMETIC = 1e-9
 
@@ -50,11 +56,13 @@ def choose(data: BumpData) -> Choice:
     if np.all(data.co_values == data.co_values[0]):
         raise ValueError("The CO never moves in this part of the log.")
     used = np.ones(data.t.size, dtype=bool)
-    estimates = _fit_all(data, used)
-    apart = outliers(min(estimates, key=lambda e: e.cost).residual, _ARITHMETIC * float(np.ptp(data.pv)))
+    screened = _screen_all(data, used)
+    closest = settle(Problem(data, used, drift=True), screened[0], several=False)
+    apart = outliers(closest.residual, _ARITHMETIC * float(np.ptp(data.pv)))
     if np.any(apart):
         used = ~apart
-        estimates = _fit_all(data, used)
+        screened = _screen_all(data, used)
+    estimates = _settle_contenders(data, used, screened)
     noise = _common_noise(estimates, data, used)
     ranked = sorted(estimates, key=lambda e: _criterion(e, data, used, noise))
     scores = np.array([_criterion(e, data, used, noise) for e in ranked])
@@ -63,10 +71,11 @@ def choose(data: BumpData) -> Choice:
     drift_kept = _drift_matters(ranked[0], data, used)
     candidates = []
     for estimate, score, weight in zip(ranked, scores, weights, strict=True):
-        settled = estimate
-        if not drift_kept and weight >= _WEIGHT_THAT_COUNTS and estimate.structure.integrators == 0:
-            settled = _without_drift(estimate, data, used)
-        own = colour(settled.residual[used], data.t[used], settled.jacobian)
+        settled, own = estimate, noise
+        if weight >= _WEIGHT_THAT_COUNTS:
+            if not drift_kept and estimate.structure.integrators == 0:
+                settled = _without_drift(estimate, data, used)
+            own = colour(settled.residual[used], data.t[used], settled.jacobian)
         fit = to_fit(settled, data, used, own, float(score))
         candidates.append(Candidate(fit=fit, score=float(score - scores[0]), weight=float(weight)))
     best = candidates[0].fit
@@ -75,15 +84,38 @@ def choose(data: BumpData) -> Choice:
     return Choice(best=best, candidates=tuple(candidates), reason=_reason(candidates))
 
 
-def _fit_all(data: BumpData, used: NDArray[np.bool_]) -> list[Estimate]:
+def _screen_all(data: BumpData, used: NDArray[np.bool_]) -> list[Screened]:
+    """Look at every structure quickly, closest to the log first."""
     problem = Problem(data, used, drift=True)
-    return [fit_structure(problem, structure) for structure in all_structures()]
+    return sorted((screen(problem, structure) for structure in all_structures()), key=lambda s: s.cost)
+
+
+def _settle_contenders(data: BumpData, used: NDArray[np.bool_], screened: list[Screened]) -> list[Estimate]:
+    """Settle the structures whose criterion, seen roughly, leaves them a chance; the others as they are."""
+    problem = Problem(data, used, drift=True)
+    count = int(np.count_nonzero(used))
+    rough = [
+        count * np.log(max(s.cost, 1e-18 * count)) + s.structure.parameter_count * np.log(count)
+        for s in screened
+    ]
+    order = np.argsort(rough, kind="stable")
+    out = []
+    for place, index in enumerate(order):
+        contender = place < _CONTENDERS or rough[index] < rough[order[0]] + _CONTENDER_DISTANCE
+        out.append(settle(problem, screened[index]) if contender else as_screened(problem, screened[index]))
+    return out
 
 
 def _without_drift(estimate: Estimate, data: BumpData, used: NDArray[np.bool_]) -> Estimate:
     problem = Problem(data, used, drift=False)
-    return fit_structure(
-        problem, estimate.structure, starts=[(estimate.search, max(estimate.dead_time, 0.0))]
+    start = (estimate.search, estimate.dead_time)
+    begun = Screened(structure=estimate.structure, end=start, cost=estimate.cost, starts=(start,))
+    settled = settle(problem, begun, several=False)
+    return replace(
+        settled,
+        starts=estimate.starts,
+        starts_agreeing=estimate.starts_agreeing,
+        rival_dead_times=estimate.rival_dead_times,
     )
 
 
@@ -104,11 +136,12 @@ def _criterion(estimate: Estimate, data: BumpData, used: NDArray[np.bool_], nois
 
 def _drift_matters(estimate: Estimate, data: BumpData, used: NDArray[np.bool_]) -> bool:
     """Hold the drift against its own standard error under the noise's colour."""
-    from fitters.noise import covariance
-
     own = colour(estimate.residual[used], data.t[used], estimate.jacobian)
     variance = covariance(estimate.jacobian, data.t[used], own)[-1, -1]
-    return bool(abs(estimate.drift) > _DRIFT_SURE * np.sqrt(variance))
+    moved = abs(estimate.drift) * data.span
+    return bool(
+        abs(estimate.drift) > _DRIFT_SURE * np.sqrt(variance) and moved > _DRIFT_SEEN * np.ptp(data.pv)
+    )
 
 
 def _notes(apart: NDArray[np.bool_], drift_kept: bool) -> tuple[tuple[str, str], ...]:
@@ -152,9 +185,8 @@ def fit_named(data: BumpData, name: str) -> Fit:
     KeyError
         If there is no such structure.
     """
-    from fitters.structures import structure_named
-
     used = np.ones(data.t.size, dtype=bool)
-    estimate = fit_structure(Problem(data, used, drift=True), structure_named(name))
+    problem = Problem(data, used, drift=True)
+    estimate = settle(problem, screen(problem, structure_named(name)))
     noise = colour(estimate.residual, data.t, estimate.jacobian)
     return to_fit(estimate, data, used, noise, _criterion(estimate, data, used, noise))

@@ -1,9 +1,8 @@
 """One structure fitted to one test: the search, and what it found.
 
-The search runs over the few numbers that enter non-linearly; the numerator, the offset and
-the drift follow by linear least squares at every step (variable projection: Golub and
-Pereyra 1973, with the simplified derivative of Kaufman 1975). lmfit runs the steps with
-analytic derivatives.
+lmfit runs the steps, with analytic derivatives, over the few numbers that enter
+non-linearly. Every structure is first screened from its most promising start with loose
+tolerances; those that stay in the running are settled from several dead times to the last digit.
 """
 
 from __future__ import annotations
@@ -14,26 +13,32 @@ from typing import TYPE_CHECKING, Any
 import lmfit
 import numpy as np
 
-from fitters.response import HeldInput, respond
+from fitters.problem import limited
+from fitters.response import respond
+from fitters.starts import Start, coarse_starts
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
-    from fitters.fit import BumpData
+    from fitters.problem import Problem
     from fitters.structures.base import Structure
 
-#: Rows that the coarse search looks at; enough to tell good starts from bad ones.
-_COARSE_ROWS = 120
-#: Dead times tried, from none to most of the time left after the first move.
-_COARSE_DEAD_TIMES = 11
-#: Starts refined for each structure.
-_STARTS = 3
+#: Up to this many searched numbers and gains one start will do to screen a structure.
+_SIMPLE = 2
 #: Two refined costs this close, relatively, are the same answer [1].
 _SAME_COST = 1e-3
-#: Steps after which a search that has not settled is given up.
-_MOST_EVALUATIONS = 120
-#: Searched logarithms beyond these leave the shapes without meaning: exp(+-40).
-_LOG_LIMIT = 40.0
+#: A minimum this close to the deepest one is a rival to be named [1].
+_RIVAL_COST = 0.02
+#: Evaluations after which a screening, and a search, is given up.
+_SCREENING_EVALUATIONS = 25
+_MOST_EVALUATIONS = 200
+#: Relative change of cost at which screening is content, and at which a search has settled [1].
+_SCREENING_TOLERANCE = 1e-4
+_SETTLED_TOLERANCE = 1e-13
+#: Costs per row below this, in squared spreads of the PV, are all a perfect fit [1].
+_PERFECT = 1e-16
+#: Flat stretches of the cost looked at for a pure dead time.
+_FLAT_STRETCHES = 200
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -86,100 +91,25 @@ class Estimate:
     dead_time_fixed: bool
 
 
-class Problem:
-    """A test prepared for fitting: rows in use, level and drift projected out.
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Screened:
+    """A structure after its first, quick look.
 
-    Parameters
+    Attributes
     ----------
-    data : BumpData
-    used : (n,) bool ndarray
-        Rows that count.
-    drift : bool
-        Fit a straight-line drift besides the level.
-    """
-
-    def __init__(self, data: BumpData, used: NDArray[np.bool_], *, drift: bool) -> None:
-        self.data = data
-        self.used = used
-        self.drift = drift
-        self.held_all = HeldInput.from_data(data)
-        self.held = self.held_all.at_rows(used)
-        self.t = data.t[used]
-        centre = data.t[0]
-        self.levels = _levels(self.t - centre, drift=drift)
-        self.levels_all = _levels(data.t - centre, drift=drift)
-        self.level_basis = np.linalg.qr(self.levels)[0]
-        self.level = float(np.mean(data.pv[used]))
-        self.spread = max(float(np.std(data.pv[used])), 1e-300)
-        self.pv = self._without_level(((data.pv[used] - self.level) / self.spread)[None])[0]
-        moved_at = float(self.held.at[0]) if self.held.at.size else float(data.t[0])
-        self.longest_dead_time = max(float(data.t[-1]) - moved_at - 4.0 * data.interval, data.interval)
-
-    def _without_level(self, rows: NDArray[np.float64]) -> NDArray[np.float64]:
-        return rows - (rows @ self.level_basis) @ self.level_basis.T
-
-    def project(
-        self, structure: Structure, search: NDArray[np.float64], dead_time: float, *, slopes: bool
-    ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-        """Give the residual with the linear part solved, and its slopes if asked.
-
-        Parameters
-        ----------
-        structure : Structure
-        search : (k,) ndarray
-        dead_time : float
-            [s].
-        slopes : bool
-
-        Returns
-        -------
-        residual : (m,) ndarray
-            In spreads of the PV.
-        slopes : (k + 1, m) ndarray
-            Kaufman's derivative by the searched numbers and the dead time; empty unless asked.
-        """
-        response = respond(structure, self.held, _limited(search), dead_time)
-        regressors = self._without_level(response.value)
-        q, r = np.linalg.qr(regressors.T)
-        gains = _solve_triangle(r, q.T @ self.pv)
-        residual = self.pv - q @ (q.T @ self.pv)
-        if not slopes:
-            return residual, np.empty((0, residual.size))
-        change = np.empty((structure.searched + 1, residual.size))
-        change[:-1] = np.einsum("r,krn->kn", gains, response.by_search)
-        change[-1] = gains @ response.by_dead_time
-        change = self._without_level(change)
-        change -= (change @ q) @ q.T
-        return residual, -change
-
-
-def fit_structure(
-    problem: Problem, structure: Structure, *, starts: list[tuple[NDArray[np.float64], float]] | None = None
-) -> Estimate:
-    """Find the parameters of a structure that explain the PV best.
-
-    Parameters
-    ----------
-    problem : Problem
     structure : Structure
-    starts : list of ((k,) ndarray, float) or None
-        Searched numbers and dead times to start from; None looks for them.
-
-    Returns
-    -------
-    Estimate
+    end : Start
+        Searched numbers and dead time it came to.
+    cost : float
+        Sum of squares there, in squared spreads of the PV [1].
+    starts : tuple of Start
+        Starting points found, the one already used first.
     """
-    if starts is None:
-        starts = _coarse_starts(problem, structure)
-    if not structure.has_dead_time_search:
-        return _finish(problem, structure, np.empty(0), _best_lookup(problem, structure, starts), [], True)
-    ends = [_refine(problem, structure, search, dead_time, hold=False) for search, dead_time in starts]
-    ends.sort(key=lambda end: end.cost)
-    best = ends[0]
-    if best.dead_time < 0.0:
-        at_zero = _refine(problem, structure, best.search, 0.0, hold=True)
-        return _finish(problem, structure, at_zero.search, 0.0, ends, at_zero.converged, free=best.dead_time)
-    return _finish(problem, structure, best.search, best.dead_time, ends, best.converged)
+
+    structure: Structure
+    end: Start
+    cost: float
+    starts: tuple[Start, ...]
 
 
 @dataclass(frozen=True, slots=True)
@@ -190,18 +120,88 @@ class _End:
     converged: bool
 
 
-def _refine(
-    problem: Problem, structure: Structure, search: NDArray[np.float64], dead_time: float, *, hold: bool
-) -> _End:
-    """Run lmfit's Levenberg-Marquardt from one start."""
+def screen(problem: Problem, structure: Structure) -> Screened:
+    """Fit a structure roughly, to see whether it is worth more.
+
+    Parameters
+    ----------
+    problem : Problem
+    structure : Structure
+
+    Returns
+    -------
+    Screened
+    """
+    starts = tuple(coarse_starts(problem, structure))
+    if not structure.has_dead_time_search:
+        dead_time = _best_lookup(problem, structure, starts)
+        cost = float(problem.costs(structure, np.empty(0), np.array([dead_time]))[0])
+        return Screened(structure=structure, end=(np.empty(0), dead_time), cost=cost, starts=starts)
+    many = structure.searched + structure.gains > _SIMPLE
+    ends = [_refine(problem, structure, start, quick=True) for start in (starts if many else starts[:1])]
+    end = min(ends, key=lambda e: e.cost)
+    return Screened(structure=structure, end=(end.search, end.dead_time), cost=end.cost, starts=starts)
+
+
+def settle(problem: Problem, screened: Screened, *, several: bool = True) -> Estimate:
+    """Find the parameters of a structure that explain the PV best.
+
+    Parameters
+    ----------
+    problem : Problem
+    screened : Screened
+    several : bool
+        Start from the other promising dead times too; False trusts the screening.
+
+    Returns
+    -------
+    Estimate
+    """
+    structure = screened.structure
+    if not structure.has_dead_time_search:
+        only = _End(np.empty(0), screened.end[1], screened.cost, True)
+        return _collect(problem, structure, only, [only], hold=True)
+    ends = [_refine(problem, structure, screened.end, quick=False)]
+    if several:
+        for start in screened.starts[1:]:
+            rough = _refine(problem, structure, start, quick=True)
+            if rough.cost < ends[0].cost * (1.0 - _SAME_COST):
+                rough = _refine(problem, structure, (rough.search, rough.dead_time), quick=False)
+            ends.append(rough)
+        ends.sort(key=lambda end: end.cost)
+    best = ends[0]
+    if best.dead_time < 0.0:
+        held = _refine(problem, structure, (best.search, 0.0), quick=False, hold=True)
+        return _collect(problem, structure, held, ends, hold=True)
+    return _collect(problem, structure, best, ends, hold=False)
+
+
+def as_screened(problem: Problem, screened: Screened) -> Estimate:
+    """Take the quick look for the answer, for a structure that is out of the running.
+
+    Parameters
+    ----------
+    problem : Problem
+    screened : Screened
+
+    Returns
+    -------
+    Estimate
+    """
+    end = _End(screened.end[0], screened.end[1], screened.cost, True)
+    return _collect(problem, screened.structure, end, [end], hold=end.dead_time < 0.0)
+
+
+def _refine(problem: Problem, structure: Structure, start: Start, *, quick: bool, hold: bool = False) -> _End:
+    """Run lmfit's Levenberg-Marquardt from one start; `hold` keeps the dead time."""
     names = [f"q{k}" for k in range(structure.searched)]
-    parameters = lmfit.Parameters()
-    for name, value in zip(names, search, strict=True):
-        parameters.add(name, value=float(value))
-    parameters.add("dead_time", value=float(dead_time), vary=not hold)
     if hold and not names:
-        residual, _ = problem.project(structure, search, dead_time, slopes=False)
-        return _End(search, dead_time, float(residual @ residual), True)
+        cost = float(problem.costs(structure, start[0], np.array([start[1]]))[0])
+        return _End(start[0], start[1], cost, True)
+    parameters = lmfit.Parameters()
+    for name, value in zip(names, start[0], strict=True):
+        parameters.add(name, value=float(value))
+    parameters.add("dead_time", value=float(start[1]), vary=not hold)
     seen: dict[bytes, tuple[NDArray[np.float64], NDArray[np.float64]]] = {}
 
     def evaluate(values: Any) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
@@ -209,135 +209,89 @@ def _refine(
         key = point.tobytes()
         if key not in seen:
             seen.clear()
-            seen[key] = problem.project(structure, point[:-1], float(point[-1]), slopes=True)
+            seen[key] = problem.project(structure, point[:-1], float(point[-1]))
         return seen[key]
 
     def slopes_of(values: Any) -> NDArray[np.float64]:
         slopes = evaluate(values)[1]
         return slopes[:-1] if hold else slopes
 
+    tolerance = _SCREENING_TOLERANCE if quick else _SETTLED_TOLERANCE
     result = lmfit.Minimizer(
         lambda values: evaluate(values)[0], parameters, calc_covar=False, nan_policy="propagate"
     ).leastsq(
-        Dfun=slopes_of, col_deriv=True, max_nfev=_MOST_EVALUATIONS, ftol=1e-12, xtol=1e-12, gtol=0.0
+        Dfun=slopes_of,
+        col_deriv=True,
+        max_nfev=_SCREENING_EVALUATIONS if quick else _MOST_EVALUATIONS,
+        ftol=tolerance,
+        xtol=tolerance,
+        gtol=0.0,
     )
-    end = np.array([result.params[name].value for name in names])
-    residual = result.residual
-    return _End(
-        _limited(end), float(result.params["dead_time"].value), float(residual @ residual), bool(result.success)
-    )
+    search = limited(np.array([result.params[name].value for name in names]))
+    cost = float(result.residual @ result.residual)
+    return _End(search, float(result.params["dead_time"].value), cost, bool(result.success))
 
 
-def _finish(
-    problem: Problem,
-    structure: Structure,
-    search: NDArray[np.float64],
-    dead_time: float,
-    ends: list[_End],
-    converged: bool,
-    free: float | None = None,
-) -> Estimate:
+def _collect(problem: Problem, structure: Structure, end: _End, ends: list[_End], *, hold: bool) -> Estimate:
     """Solve for the linear part at the end point and collect the whole Jacobian."""
-    response = respond(structure, problem.held, search, dead_time)
+    dead_time = max(end.dead_time, 0.0)
+    response = respond(structure, problem.held, end.search, dead_time)
     linear = np.column_stack([response.value.T, problem.levels])
     scale = np.linalg.norm(linear, axis=0)
     scale[scale == 0.0] = 1.0
     pv = problem.data.pv[problem.used] - problem.level
     factors = np.linalg.lstsq(linear / scale, pv, rcond=None)[0] / scale
     gains, levels = factors[: structure.gains], factors[structure.gains :]
-    everywhere = respond(structure, problem.held_all, search, dead_time)
+    everywhere = respond(structure, problem.held_all, end.search, dead_time)
     residual = problem.data.pv - problem.level - gains @ everywhere.value - problem.levels_all @ levels
     by_search = np.einsum("r,krn->kn", gains, response.by_search)
     by_dead_time = gains @ response.by_dead_time
-    jacobian = np.column_stack([by_search.T, by_dead_time, linear])
     used_residual = residual[problem.used]
-    best_cost = ends[0].cost if ends else 0.0
-    floor = 1e-16 * problem.pv.size  # costs below this are all a perfect fit
-    near = [end for end in ends if end.cost <= best_cost * (1.0 + _SAME_COST) + floor]
-    anchor = dead_time if free is None else free
-    apart = max(problem.data.interval, 0.05 * abs(anchor))
+    agreeing, rivals = _agreement(ends, problem)
     return Estimate(
         structure=structure,
-        search=search,
+        search=end.search,
         dead_time=dead_time,
         gains=gains,
         offset=float(levels[0] + problem.level),
         drift=float(levels[1]) if problem.drift else 0.0,
         drift_fitted=problem.drift,
         residual=residual,
-        jacobian=jacobian,
+        jacobian=np.column_stack([by_search.T, by_dead_time, linear]),
         cost=float(used_residual @ used_residual),
-        converged=converged,
-        starts=max(len(ends), 1),
-        starts_agreeing=sum(abs(end.dead_time - anchor) <= apart for end in near) if near else 1,
-        rival_dead_times=tuple(
-            end.dead_time
-            for end in ends
-            if abs(end.dead_time - anchor) > apart and end.cost <= best_cost * 1.02 + floor
-        ),
-        dead_time_fixed=free is not None or not structure.has_dead_time_search,
+        converged=end.converged,
+        starts=len(ends),
+        starts_agreeing=agreeing,
+        rival_dead_times=rivals,
+        dead_time_fixed=hold,
     )
 
 
-def _coarse_starts(problem: Problem, structure: Structure) -> list[tuple[NDArray[np.float64], float]]:
-    """Try a grid on a thinned record and keep the best start for each of a few dead times."""
-    stride = max(1, problem.t.size // _COARSE_ROWS)
-    rows = np.flatnonzero(problem.used)[::stride]
-    kept = np.zeros(problem.used.size, dtype=bool)
-    kept[rows] = True
-    coarse = Problem(problem.data, kept, drift=problem.drift)
-    shortest = problem.data.interval
-    longest = max(0.8 * problem.longest_dead_time, 2.0 * shortest)
-    dead_times = np.concatenate([[0.3 * shortest], np.geomspace(shortest, longest, _COARSE_DEAD_TIMES - 1)])
-    searches = [np.asarray(q, dtype=float) for q in structure.starts(problem.data.span, problem.data.interval)]
-    best: list[tuple[float, NDArray[np.float64], float]] = []
-    for dead_time in dead_times:
-        costs = []
-        for search in searches:
-            residual, _ = coarse.project(structure, search, float(dead_time), slopes=False)
-            costs.append(float(residual @ residual))
-        winner = int(np.argmin(costs))
-        best.append((costs[winner], searches[winner], float(dead_time)))
-    best.sort(key=lambda entry: entry[0])
-    return [(search, dead_time) for _, search, dead_time in best[:_STARTS]]
+def _agreement(ends: list[_End], problem: Problem) -> tuple[int, tuple[float, ...]]:
+    """Count the starts that came to the best answer, and name other dead times nearly as good."""
+    best = ends[0]
+    floor = _PERFECT * problem.pv.size
+    apart = max(problem.data.interval, 0.05 * abs(best.dead_time))
+    away = [end for end in ends if abs(end.dead_time - best.dead_time) > apart]
+    rivals = tuple(
+        end.dead_time
+        for end in away
+        if end.dead_time > 0.0 and end.cost <= best.cost * (1.0 + _RIVAL_COST) + floor
+    )
+    return len(ends) - len(away), rivals
 
 
-def _best_lookup(
-    problem: Problem, structure: Structure, starts: list[tuple[NDArray[np.float64], float]]
-) -> float:
+def _best_lookup(problem: Problem, structure: Structure, starts: tuple[Start, ...]) -> float:
     """Find the dead time of a structure whose cost is flat between rows: the flat part's middle."""
     nothing = np.empty(0)
-
-    def cost(dead_time: float) -> float:
-        residual, _ = problem.project(structure, nothing, dead_time, slopes=False)
-        return float(residual @ residual)
-
-    anchor = min((start[1] for start in starts), key=cost)
+    candidates = np.array([start[1] for start in starts])
+    anchor = float(candidates[int(np.argmin(problem.costs(structure, nothing, candidates)))])
     edges = np.unique(np.round((problem.held.t[:, None] - problem.held.at[None, :8]).ravel(), 9))
     edges = np.concatenate([[0.0], edges[edges > 0.0]])
     middles = 0.5 * (edges[1:] + edges[:-1])
     reach = max(0.6 * anchor, 4.0 * problem.data.interval)
     near = middles[np.abs(middles - anchor) <= reach]
-    if near.size > 200:
-        near = near[:: near.size // 200]
-    costs = [cost(float(m)) for m in near]
-    return float(near[int(np.argmin(costs))]) if near.size else anchor
-
-
-def _levels(elapsed: NDArray[np.float64], *, drift: bool) -> NDArray[np.float64]:
-    columns = [np.ones_like(elapsed)]
-    if drift:
-        columns.append(elapsed)
-    return np.column_stack(columns)
-
-
-def _limited(search: NDArray[np.float64]) -> NDArray[np.float64]:
-    return np.clip(search, -_LOG_LIMIT, _LOG_LIMIT)
-
-
-def _solve_triangle(r: NDArray[np.float64], right: NDArray[np.float64]) -> NDArray[np.float64]:
-    """Solve R x = b, giving zero to what the rows cannot tell."""
-    diagonal = np.abs(np.diag(r))
-    if diagonal.size and np.all(diagonal > 1e-12 * max(float(diagonal.max()), 1e-300)):
-        return np.asarray(np.linalg.solve(r, right))
-    return np.asarray(np.linalg.lstsq(r, right, rcond=1e-12)[0])
+    near = near[:: max(1, near.size // _FLAT_STRETCHES)]
+    if near.size == 0:
+        return anchor
+    return float(near[int(np.argmin(problem.costs(structure, nothing, near)))])

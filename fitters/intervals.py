@@ -11,6 +11,8 @@ from fitters.fit import Fit, Parameter, frozen
 from fitters.noise import covariance
 
 if TYPE_CHECKING:
+    from collections.abc import Callable
+
     from numpy.typing import NDArray
 
     from fitters.estimate import Estimate
@@ -158,7 +160,7 @@ def _quadratic_forms(slopes: NDArray[np.float64], cov: NDArray[np.float64]) -> N
     finite = np.where(np.isfinite(cov), cov, 0.0)
     out = np.maximum(np.einsum("ij,jk,ik->i", slopes, finite, slopes), 0.0)
     out[np.any(np.abs(slopes[:, unknown]) > 0.0, axis=1)] = np.inf
-    return out
+    return np.asarray(out)
 
 
 def _parameter(name: str, value: float, unit: str, sd: float, quantile: float, positive: bool) -> Parameter:
@@ -205,20 +207,25 @@ def _notes(estimate: Estimate, parameters: tuple[Parameter, ...]) -> tuple[tuple
         notes.append(
             (
                 "dead-time-may-be-zero",
-                f"The dead time lies between 0 and {dead_time.high:.3g} s; this log cannot tell it from none.",
+                f"The dead time lies between 0 and {dead_time.high:.3g} s: the log cannot tell it from none.",
             )
         )
     if estimate.rival_dead_times:
         others = " and ".join(f"{v:.3g} s" for v in sorted({round(v, 6) for v in estimate.rival_dead_times}))
         notes.append(
-            ("dead-time-ambiguous", f"A dead time of {others} fits nearly as well as {dead_time.value:.3g} s.")
+            (
+                "dead-time-ambiguous",
+                f"A dead time of {others} fits nearly as well as {dead_time.value:.3g} s.",
+            )
         )
     if not estimate.converged:
         notes.append(("search-unfinished", "The search for the parameters did not settle."))
     return tuple(notes)
 
 
-def _drawer(estimate: Estimate, cov: NDArray[np.float64], degrees: float):  # type: ignore[no-untyped-def]
+def _drawer(
+    estimate: Estimate, cov: NDArray[np.float64], degrees: float
+) -> Callable[[int, int], tuple[ProcessModel, ...]]:
     """Make the function that draws plausible processes.
 
     Gains whose sign is sure are drawn on a logarithmic scale, as the lags are, so that the

@@ -51,9 +51,7 @@ class Noise:
     effective_samples: float
 
 
-def colour(
-    residual: NDArray[np.float64], t: NDArray[np.float64], jacobian: NDArray[np.float64]
-) -> Noise:
+def colour(residual: NDArray[np.float64], t: NDArray[np.float64], jacobian: NDArray[np.float64]) -> Noise:
     """Estimate level and colour of the noise behind a residual.
 
     Parameters
@@ -191,11 +189,11 @@ def _restricted_deviance(
     residual: NDArray[np.float64], basis: NDArray[np.float64], memory: NDArray[np.float64]
 ) -> tuple[float, float]:
     """Give -2 log of the restricted likelihood, up to a constant, and the variance."""
-    n, p = basis.shape
+    n, p = basis.shape[0], basis.shape[1]
     coloured = bool(np.any(memory > 1e-12))
     both = np.column_stack([basis, residual])
     white = _whiten(both, memory) if coloured else both
-    r = np.linalg.qr(white, mode="r")
+    r = np.asarray(np.linalg.qr(white, mode="r"))
     rss = float(r[p, p] ** 2)
     variance = rss / (n - p)
     if variance <= 0.0:

@@ -85,9 +85,7 @@ class Response:
     by_dead_time: NDArray[np.float64]
 
 
-def respond(
-    structure: Structure, held: HeldInput, search: NDArray[np.float64], dead_time: float
-) -> Response:
+def respond(structure: Structure, held: HeldInput, search: NDArray[np.float64], dead_time: float) -> Response:
     """Give the exact response of a structure to a held CO.
 
     Parameters
@@ -123,9 +121,7 @@ def _superpose(
     )
 
 
-def _recur(
-    structure: Structure, held: HeldInput, search: NDArray[np.float64], dead_time: float
-) -> Response:
+def _recur(structure: Structure, held: HeldInput, search: NDArray[np.float64], dead_time: float) -> Response:
     """Propagate one state through which every response and derivative can be read.
 
     All of them are polynomials over D(s)**2, D being the structure's denominator, since
@@ -165,7 +161,7 @@ def _polynomials(
 
     def scaled(coefficients: tuple[float, ...]) -> NDArray[np.float64]:
         powers = np.arange(len(coefficients))[::-1]
-        return np.asarray(coefficients) / unit**powers
+        return np.asarray(np.asarray(coefficients) / unit**powers)
 
     def denominator_at(q: NDArray[np.float64]) -> NDArray[np.float64]:
         return scaled(structure.model(q, np.ones(structure.gains), 0.0).denominator)

@@ -114,7 +114,9 @@ class Structure(ABC):
         """
 
     @abstractmethod
-    def model(self, search: NDArray[np.float64], gains: NDArray[np.float64], dead_time: float) -> ProcessModel:
+    def model(
+        self, search: NDArray[np.float64], gains: NDArray[np.float64], dead_time: float
+    ) -> ProcessModel:
         """Build the process.
 
         Parameters
@@ -139,5 +141,3 @@ class Structure(ABC):
         dead_time : float
             Dead time [s].
         """
-
-

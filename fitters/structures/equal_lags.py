@@ -5,6 +5,7 @@ from __future__ import annotations
 from typing import TYPE_CHECKING
 
 import numpy as np
+from scipy.special import comb
 
 from fitters.process import ProcessModel
 from fitters.structures import shapes
@@ -38,9 +39,8 @@ class EqualLags(Structure):
         self, search: NDArray[np.float64], gains: NDArray[np.float64], dead_time: float
     ) -> ProcessModel:
         lag = float(np.exp(search[0]))
-        denominator = np.ones(1)
-        for _ in range(self.count):
-            denominator = np.polymul(denominator, [lag, 1.0])
+        powers = np.arange(self.count, -1, -1)
+        denominator = comb(self.count, powers) * lag**powers
         return ProcessModel(numerator=(gains[0],), denominator=tuple(denominator), dead_time=dead_time)
 
     def quantities(  # noqa: D102

@@ -34,9 +34,7 @@ class FirstOrder(Structure):
     def model(  # noqa: D102
         self, search: NDArray[np.float64], gains: NDArray[np.float64], dead_time: float
     ) -> ProcessModel:
-        return ProcessModel(
-            numerator=(gains[0],), denominator=(np.exp(search[0]), 1.0), dead_time=dead_time
-        )
+        return ProcessModel(numerator=(gains[0],), denominator=(np.exp(search[0]), 1.0), dead_time=dead_time)
 
     def quantities(  # noqa: D102
         self, search: NDArray[np.float64], gains: NDArray[np.float64], dead_time: float

@@ -39,9 +39,7 @@ class SecondOrder(Structure):
     def model(  # noqa: D102
         self, search: NDArray[np.float64], gains: NDArray[np.float64], dead_time: float
     ) -> ProcessModel:
-        return ProcessModel(
-            numerator=(gains[0],), denominator=_denominator(search), dead_time=dead_time
-        )
+        return ProcessModel(numerator=(gains[0],), denominator=_denominator(search), dead_time=dead_time)
 
     def quantities(  # noqa: D102
         self, search: NDArray[np.float64], gains: NDArray[np.float64], dead_time: float

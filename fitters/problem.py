@@ -1,0 +1,185 @@
+"""A test made ready for fitting: the rows that count, the linear part solved on the way.
+
+The search runs over the few numbers that enter non-linearly; the numerator, the offset and
+the drift follow by linear least squares at every step (variable projection: Golub and
+Pereyra 1973, with the simplified derivative of Kaufman 1975).
+"""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from fitters.response import HeldInput, respond
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+    from fitters.fit import BumpData
+    from fitters.structures.base import Structure
+
+#: Searched logarithms beyond these leave the shapes without meaning: exp(+-40).
+_LOG_LIMIT = 40.0
+#: A regressor this small against its own size before projection tells nothing new [1].
+_NOTHING_NEW = 1e-12
+
+
+class Problem:
+    """A test prepared for fitting: rows in use, level and drift projected out.
+
+    Parameters
+    ----------
+    data : BumpData
+    used : (n,) bool ndarray
+        Rows that count.
+    drift : bool
+        Fit a straight-line drift besides the level.
+
+    Attributes
+    ----------
+    t, pv : (m,) ndarray
+        Times [s] and PV without level and drift, in spreads of the PV, at the used rows.
+    held, held_all : HeldInput
+        The CO seen at the used rows, and at all of them.
+    levels, levels_all : (m, 1 or 2), (n, 1 or 2) ndarray
+        Columns of offset and, if fitted, drift.
+    longest_dead_time : float
+        Dead times beyond this leave too few rows to see an answer [s].
+    """
+
+    def __init__(self, data: BumpData, used: NDArray[np.bool_], *, drift: bool) -> None:
+        self.data = data
+        self.used = used
+        self.drift = drift
+        self.held_all = HeldInput.from_data(data)
+        self.held = self.held_all.at_rows(used)
+        self.t = data.t[used]
+        self.levels = _levels(self.t - data.t[0], drift=drift)
+        self.levels_all = _levels(data.t - data.t[0], drift=drift)
+        self._level_basis = np.linalg.qr(self.levels)[0]
+        self.level = float(np.mean(data.pv[used]))
+        spread = float(np.std(data.pv[used]))
+        self.pv = self.without_level((data.pv[used] - self.level) / (spread if spread > 0 else 1.0))
+        moved_at = float(self.held.at[0]) if self.held.at.size else float(data.t[0])
+        self.longest_dead_time = max(float(data.t[-1]) - moved_at - 4.0 * data.interval, data.interval)
+
+    def without_level(self, rows: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Take offset and drift out of rows of values.
+
+        Parameters
+        ----------
+        rows : (..., m) ndarray
+        """
+        return np.asarray(rows - (rows @ self._level_basis) @ self._level_basis.T)
+
+    def thinned(self, count: int) -> Problem:
+        """Give the same problem on about `count` evenly chosen rows.
+
+        Parameters
+        ----------
+        count : int
+        """
+        rows = np.flatnonzero(self.used)
+        kept = np.zeros(self.used.size, dtype=bool)
+        kept[rows[:: max(1, rows.size // count)]] = True
+        return Problem(self.data, kept, drift=self.drift)
+
+    def project(
+        self, structure: Structure, search: NDArray[np.float64], dead_time: float
+    ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """Give the residual with the linear part solved, and its slopes.
+
+        Parameters
+        ----------
+        structure : Structure
+        search : (k,) ndarray
+        dead_time : float
+            [s].
+
+        Returns
+        -------
+        residual : (m,) ndarray
+            In spreads of the PV.
+        slopes : (k + 1, m) ndarray
+            Kaufman's derivative of the residual by the searched numbers and the dead time.
+        """
+        response = respond(structure, self.held, limited(search), dead_time)
+        basis, factors = _orthonormal(self.without_level(response.value), self.pv)
+        residual = self.pv - (basis @ self.pv) @ basis
+        change = np.empty((structure.searched + 1, residual.size))
+        change[:-1] = np.einsum("r,krn->kn", factors, response.by_search)
+        change[-1] = factors @ response.by_dead_time
+        change = self.without_level(change)
+        change -= (change @ basis.T) @ basis
+        return residual, -change
+
+    def costs(
+        self, structure: Structure, search: NDArray[np.float64], dead_times: NDArray[np.float64]
+    ) -> NDArray[np.float64]:
+        """Give the sum of squares at several dead times, the linear part solved.
+
+        Parameters
+        ----------
+        structure : Structure
+        search : (k,) ndarray
+        dead_times : (d,) ndarray
+            [s].
+
+        Returns
+        -------
+        (d,) ndarray
+            In squared spreads of the PV.
+        """
+        out = np.empty(dead_times.size)
+        for i, dead_time in enumerate(dead_times):
+            value = respond(structure, self.held, limited(search), float(dead_time)).value
+            basis, _ = _orthonormal(self.without_level(value), self.pv)
+            residual = self.pv - (basis @ self.pv) @ basis
+            out[i] = residual @ residual
+        return out
+
+
+def limited(search: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Keep searched logarithms where their exponentials are finite.
+
+    Parameters
+    ----------
+    search : (k,) ndarray
+    """
+    return np.clip(search, -_LOG_LIMIT, _LOG_LIMIT)
+
+
+def _levels(elapsed: NDArray[np.float64], *, drift: bool) -> NDArray[np.float64]:
+    columns = [np.ones_like(elapsed)]
+    if drift:
+        columns.append(elapsed)
+    return np.column_stack(columns)
+
+
+def _orthonormal(
+    rows: NDArray[np.float64], pv: NDArray[np.float64]
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Make one or two rows orthonormal by hand, faster than a general QR, and solve for the PV.
+
+    Returns the (r, m) basis, zero rows where a regressor tells nothing new, and the (r,) factors.
+    """
+    basis = np.zeros_like(rows)
+    first = rows[0]
+    size = float(np.sqrt(first @ first))
+    if size > 0.0:
+        basis[0] = first / size
+    if rows.shape[0] == 1:
+        return basis, np.array([float(basis[0] @ pv) / size if size > 0.0 else 0.0])
+    shared = float(basis[0] @ rows[1])
+    rest = rows[1] - shared * basis[0]
+    again = float(basis[0] @ rest)  # once more: one pass leaves rounding behind (Kahan's rule)
+    rest -= again * basis[0]
+    shared += again
+    rest_size = float(np.sqrt(rest @ rest))
+    second = 0.0
+    if rest_size > _NOTHING_NEW * max(float(np.sqrt(rows[1] @ rows[1])), 1e-300):
+        basis[1] = rest / rest_size
+        second = float(basis[1] @ pv) / rest_size
+    head = (float(basis[0] @ pv) - shared * second) / size if size > 0.0 else 0.0
+    return basis, np.array([head, second])
