@@ -1,0 +1,68 @@
+"""Two computations of one answer, compared: frequency response against simulation."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from pipeline.errors import ChecksDisagree
+from pipeline.loop.controller import feedback_path, setpoint_path
+from pipeline.loop.metrics import final_value
+from pipeline.loop.simulate import stable_in_time
+
+if TYPE_CHECKING:
+    from fitters.process import ProcessModel
+    from pipeline.loop.types import Controller, Margins, Prediction
+
+#: A loop this close to its limit may be called either way [1]: the simulation's grid error in gain.
+_MARGINAL = 1.005
+#: Simulation and final-value theorem may differ by this at the horizon [share of the step].
+_FINAL = 0.01
+
+
+def check_agreement(
+    model: ProcessModel, controller: Controller, margins: Margins, prediction: Prediction
+) -> None:
+    """Compare what the frequency domain and the time domain say about one loop.
+
+    Parameters
+    ----------
+    model : ProcessModel
+    controller : Controller
+    margins : Margins
+        From `pipeline.loop.margins.margins`.
+    prediction : Prediction
+        From `pipeline.loop.simulate.predict`.
+
+    Raises
+    ------
+    ChecksDisagree
+        If the encirclement count and the simulation differ about stability, or a settled
+        simulation does not end where the loop's static gain says.
+    """
+    in_time = stable_in_time(model, controller)
+    near = margins.stable and (
+        margins.gain_margin < _MARGINAL or margins.gain_reduction_margin > 1.0 / _MARGINAL
+    )
+    if in_time != margins.stable and not near:
+        says = {True: "stable", False: "unstable"}
+        raise ChecksDisagree(
+            f"The frequency response calls the loop {says[margins.stable]}, the simulation {says[in_time]}.",
+            remedy="No settings are given; please report this with the log.",
+        )
+    if not margins.stable or not np.isfinite(prediction.settling_time):
+        return
+    num, den = (np.polymul(p, q) for p, q in zip(setpoint_path(controller), _pair(model), strict=True))
+    loop = tuple(np.polymul(p, q) for p, q in zip(feedback_path(controller), _pair(model), strict=True))
+    expected = final_value((num, den), (loop[0], loop[1]))
+    reached = float(prediction.setpoint.pv[-1])
+    if abs(reached - expected) > _FINAL * max(abs(expected), 1.0):
+        raise ChecksDisagree(
+            f"The simulated PV ends at {reached:.4g} of the set-point step, the static gain says {expected:.4g}.",
+            remedy="No settings are given; please report this with the log.",
+        )
+
+
+def _pair(model: ProcessModel) -> tuple[tuple[float, ...], tuple[float, ...]]:
+    return model.numerator, model.denominator

@@ -1,0 +1,181 @@
+"""Set-point responses of many loops at once, by numerical inversion of their transforms."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import TYPE_CHECKING
+
+import numpy as np
+from scipy.special import gammainc
+
+from pipeline.loop.controller import extra_dead_time, feedback_path, setpoint_path
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+    from fitters.process import ProcessModel
+    from pipeline.loop.types import Controller
+
+    Reals = NDArray[np.float64]
+
+#: Damping of the inversion line over one period [1]: a response that comes round from the
+#: period before is weakened by exp(-9), 1e-4; more would magnify truncation at the far end.
+_DAMPING = 9.0
+#: Second difference above which a peak is a jump or a corner, not a parabola [share of the step].
+_SMOOTH = 0.05
+
+
+def batch_setpoint(
+    models: Sequence[ProcessModel],
+    controllers: Sequence[Controller],
+    *,
+    horizon: float,
+    points: int = 512,
+) -> tuple[Reals, Reals]:
+    """Give unit set-point responses of stable loops.
+
+    Parameters
+    ----------
+    models : sequence of ProcessModel
+        All of one degree of numerator and denominator.
+    controllers : sequence of Controller
+        All of one kind; either sequence may hold one item, which then serves every row.
+    horizon : float
+        Length of the responses [s].
+    points : int
+        Points of the grid.
+
+    Returns
+    -------
+    t : (points,) ndarray
+        Grid from zero [s].
+    pv : (m, points) ndarray
+        Responses [1]. Rows of unstable loops mean nothing.
+
+    Notes
+    -----
+    The response is the Fourier series of its damped self over two horizons. What is not
+    smooth is taken out first and put back exactly: the jumps of a process that answers at
+    once, otherwise the corner at the end of the dead time, so the series ends fast.
+
+    References
+    ----------
+    Dubner and Abate (1968), Journal of the ACM 15, 115-123.
+    """
+    m = max(len(models), len(controllers))
+    rows = [(models[i % len(models)], controllers[i % len(controllers)]) for i in range(m)]
+    sp_num, sp_den, fb_num, fb_den, g_num, g_den = (
+        _stacked([pick(g, c) for g, c in rows])
+        for pick in (
+            lambda g, c: setpoint_path(c)[0],
+            lambda g, c: setpoint_path(c)[1],
+            lambda g, c: feedback_path(c)[0],
+            lambda g, c: feedback_path(c)[1],
+            lambda g, c: np.asarray(g.numerator),
+            lambda g, c: np.asarray(g.denominator),
+        )
+    )
+    delay = np.array([g.dead_time + extra_dead_time(c) for g, c in rows])
+    period = 2.0 * horizon
+    count = 2 * points
+    a = _DAMPING / period
+    s = a + 2j * np.pi / period * np.arange(points + 1)
+    late = np.exp(-delay[:, None] * s)
+    g = _at(g_num, s) / _at(g_den, s) * late
+    forced = g * _at(sp_num, s) / _at(sp_den, s)
+    y = forced / (s * (1.0 + g * _at(fb_num, s) / _at(fb_den, s)))
+
+    t = period / count * np.arange(count)
+    first, second, order = _leading(sp_num, sp_den, g_num, g_den)
+    known = np.zeros((m, count))
+    since = t[None, :] - delay[:, None]
+    stepped, cornered = order == 0, (order == 1) | (order == 2)
+    if stepped.any():
+        direct, _, loop_order = _leading(fb_num, fb_den, g_num, g_den)
+        direct = np.where(loop_order == 0, direct, 0.0)
+        y = y - np.where(stepped[:, None], first[:, None] * late / (s * (1.0 + direct[:, None] * late)), 0.0)
+        known += np.where(stepped[:, None], _stairs(first, direct, delay, t), 0.0)
+    if cornered.any():
+        power = np.where(cornered, order, 1)
+        speed = np.where(-second / power > 0.0, -second / power, 10.0 / horizon)
+        part = first[:, None] * late / (s * (s + speed[:, None]) ** power[:, None])
+        y = y - np.where(cornered[:, None], part, 0.0)
+        shape = gammainc(power[:, None].astype(float), speed[:, None] * np.maximum(since, 0.0))
+        known += np.where(cornered[:, None], (first / speed**power)[:, None] * shape, 0.0)
+    # The last coefficient stands for both ends of the band.
+    y[:, -1] *= 0.5
+    response = np.fft.irfft(y, n=count, axis=1) * (count / period) * np.exp(a * t) + known
+    response[since < 0.0] = 0.0
+    return t[:points], np.asarray(response[:, :points], dtype=float)
+
+
+def _stacked(polys: list[Reals]) -> Reals:
+    width = max(p.size for p in polys)
+    out = np.zeros((len(polys), width))
+    for i, p in enumerate(polys):
+        out[i, width - p.size :] = p
+    return out
+
+
+def _at(poly: Reals, s: NDArray[np.complex128]) -> NDArray[np.complex128]:
+    if np.all(poly == poly[:1]):
+        poly = poly[:1]
+    out = np.repeat(poly[:, :1].astype(complex), s.size, axis=1)
+    for k in range(1, poly.shape[1]):
+        out = out * s + poly[:, k : k + 1]
+    return out
+
+
+def _leading(*polys: Reals) -> tuple[Reals, Reals, NDArray[np.int64]]:
+    """Give c, c1 and r of (n1/d1)(n2/d2) = c s**-r (1 + c1/s + ...)."""
+    c, c1, r = np.ones(1), np.zeros(1), np.zeros(1, dtype=np.int64)
+    for i, poly in enumerate(polys):
+        at = np.argmax(poly != 0.0, axis=1)
+        rows = np.arange(poly.shape[0])
+        lead = poly[rows, at]
+        follow = np.where(at + 1 < poly.shape[1], poly[rows, np.minimum(at + 1, poly.shape[1] - 1)], 0.0)
+        degree = poly.shape[1] - 1 - at
+        way = 1 if i % 2 == 0 else -1
+        with np.errstate(divide="ignore", invalid="ignore"):
+            c = c * lead**way
+            c1 = c1 + way * np.where(lead != 0.0, follow / lead, 0.0)
+        r = r - way * degree
+    return c, c1, r
+
+
+def _stairs(first: Reals, direct: Reals, delay: Reals, t: Reals) -> Reals:
+    with np.errstate(divide="ignore", invalid="ignore"):
+        passes = np.where(delay[:, None] > 0.0, np.floor(t / delay[:, None] + 1e-9), np.inf)
+    d = direct[:, None]
+    with np.errstate(over="ignore", invalid="ignore"):
+        held = np.where(np.isinf(passes), 1.0, 1.0 - (-d) ** np.where(np.isinf(passes), 0.0, passes))
+    return np.asarray(first[:, None] * np.where(passes >= 1.0, held, 0.0) / (1.0 + d), dtype=float)
+
+
+def batch_overshoot(pv: Reals, final: Reals) -> Reals:
+    """Read overshoots off batch responses.
+
+    Parameters
+    ----------
+    pv : (m, n) ndarray
+        Responses.
+    final : (m,) ndarray
+        Their final values.
+
+    Returns
+    -------
+    (m,) ndarray
+        Peak above the final value [% of it], the peak between grid points by a parabola;
+        inf without a finite final value other than zero.
+    """
+    share = pv / np.where(final == 0.0, np.nan, final)[:, None]
+    k = np.clip(np.argmax(np.nan_to_num(share, nan=-np.inf), axis=1), 1, pv.shape[1] - 2)
+    rows = np.arange(pv.shape[0])
+    left, mid, right = share[rows, k - 1], share[rows, k], share[rows, k + 1]
+    bend = left - 2.0 * mid + right
+    with np.errstate(divide="ignore", invalid="ignore"):
+        # A jump is no parabola: only a well resolved peak is lifted.
+        smooth = (bend < 0.0) & (bend > -_SMOOTH)
+        lift = np.where(smooth, -((right - left) ** 2) / (8.0 * bend), 0.0)
+    over = 100.0 * (np.maximum(mid + lift, share.max(axis=1)) - 1.0)
+    return np.where(np.isfinite(final) & (final != 0.0), np.maximum(over, 0.0), np.inf)

@@ -1,0 +1,396 @@
+"""The largest integral gain that keeps every criterion on the nominal model."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from pipeline.findings import Caution
+from pipeline.loop.margins import margins
+from pipeline.loop.simulate import overshoot, predict
+from pipeline.loop.stack import stack_loops
+from pipeline.loop.types import Controller
+from pipeline.tuning.criteria import NAMES, GainRange, gain_range
+from pipeline.tuning.types import Criteria, Tuning
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+    from fitters.process import ProcessModel
+    from pipeline.loop.types import Kind
+
+    Reals = NDArray[np.float64]
+
+#: Grids of the search and of the final answer.
+_SEARCH = {"per_decade": 30, "floor": 0.2}
+_FINAL = {"per_decade": 80, "floor": 0.02}
+#: A derivative time above a quarter of the integral time has no series equation, so no
+#: controller of that kind could be set to it.
+MOST_DERIVATIVE = 0.25
+#: Stand-in dead time where nothing limits the gain [share of the fastest lag]: less than
+#: this a bump test does not show.
+_UNSEEN = 0.1
+#: Overshoot is met to this [%].
+_OVERSHOOT_TOLERANCE = 0.005
+#: Gains tried downwards for the overshoot [share of the largest].
+_LADDER = np.geomspace(1.0, 0.03, 12)
+
+
+@dataclass(frozen=True, kw_only=True)
+class _Job:
+    """One tuning: model with the dead-time floor, controller pattern, what may be varied."""
+
+    model: ProcessModel
+    pattern: Controller
+    ratio: float
+    scales: Reals
+
+    def shape(self, integral: float, derivative: float, gain: float = 1.0) -> Controller:
+        """Give the controller with these times and this gain."""
+        return replace(
+            self.pattern, gain=gain, integral_time=integral, derivative_time=derivative,
+            derivative_filter=derivative / self.ratio,
+        )
+
+    def speed(self, high: Reals, integral: Reals) -> Reals:
+        """Give what is maximised: integral gain, or gain without integral action."""
+        return high / integral if self.pattern.kind in ("PI", "PID") else high
+
+
+def tune(
+    model: ProcessModel,
+    *,
+    kind: Kind,
+    criteria: Criteria,
+    setpoint_weight: float = 1.0,
+    derivative_setpoint_weight: float = 0.0,
+    pv_filter: float = 0.0,
+    scan: float = 0.0,
+    compute_delay: float = 0.0,
+    derivative_filter_ratio: float = 10.0,
+    dead_time_floor: float = 0.0,
+) -> Tuning:
+    """Find the settings with the largest integral gain that keep every criterion.
+
+    Parameters
+    ----------
+    model : ProcessModel
+    kind : {"P", "I", "PI", "PD", "PID"}
+        P and PD: the largest gain. An I controller is given with Ti = 1 s.
+    criteria : Criteria
+    setpoint_weight, derivative_setpoint_weight : float
+        As the controller has them [1].
+    pv_filter, scan, compute_delay : float
+        As the controller has them [s].
+    derivative_filter_ratio : float
+        Derivative time over its filter [1].
+    dead_time_floor : float
+        Least dead time to count on [s].
+
+    Returns
+    -------
+    Tuning
+        `reached` is False when no gain keeps every criterion; the settings then keep the
+        largest common share of all of them. Where the model sets no limit to the gain, a
+        remark of level "stop" says so and the settings rest on an assumed dead time.
+
+    Notes
+    -----
+    PID keeps Ti >= 4 Td, so that every controller equation can hold the result.
+    """
+    held = replace(model, dead_time=max(model.dead_time, dead_time_floor))
+    action = "reverse" if model.gain >= 0.0 else "direct"
+    pattern = Controller(
+        kind=kind, gain=1.0, action=action,  # type: ignore[arg-type]
+        setpoint_weight=setpoint_weight, derivative_setpoint_weight=derivative_setpoint_weight,
+        pv_filter=pv_filter, scan=scan, compute_delay=compute_delay,
+    )
+    remarks: list[Caution] = []
+    job = _Job(model=held, pattern=pattern, ratio=derivative_filter_ratio, scales=_time_scales(held, pattern))
+    best = _search(job, criteria)
+    if best is not None and not np.isfinite(best[2]):
+        assumed = _UNSEEN * float(job.scales.min())
+        remarks.append(Caution(
+            code="no-gain-limit", level="stop", value=0.0, limit=assumed,
+            text=f"On this model no criterion ever limits the gain, which no real loop allows. The settings "
+            f"assume a dead time of {assumed:.3g} s; give the scan, the filter or a dead time to count on.",
+        ))
+        job = replace(job, model=replace(held, dead_time=assumed))
+        best = _search(job, criteria)
+    reached, asked = best is not None, criteria
+    share = 1.0
+    if best is None:
+        share, best = _best_share(job, criteria)
+        asked = _eased(criteria, share)
+    if best is None:
+        return _without_settings(job, remarks)
+    integral, derivative, _ = best
+    ends = gain_range(stack_loops([job.model], [job.shape(integral, derivative)]), asked, exact=True, **_FINAL)
+    gain, low = float(ends.high[0]), float(ends.low[0])
+    if not np.isfinite(gain):
+        # The coarse and the fine grid differ about a gap of no width: stay inside the coarse one.
+        gain, low = best[2], 0.0
+    binding = NAMES[int(ends.high_by[0])] if ends.high_by[0] >= 0 else "phase_margin"
+    controller = job.shape(integral, derivative, gain)
+    if criteria.overshoot is not None and reached:
+        limited = _limit_overshoot(job, criteria, controller, low)
+        if limited is None:
+            reached = False
+            remarks.append(_overshoot_remark(job, controller, criteria.overshoot))
+        elif limited is not controller:
+            controller, binding = limited, "overshoot"
+            ends = gain_range(
+                stack_loops([job.model], [replace(controller, gain=1.0)]), asked, exact=True, **_FINAL
+            )
+            low = float(ends.low[0])
+    elif criteria.overshoot is not None and overshoot(job.model, controller) > criteria.overshoot:
+        remarks.append(_overshoot_remark(job, controller, criteria.overshoot))
+    m = margins(job.model, controller)
+    if share < 1.0:
+        remarks.append(_unreached(job, criteria, m.phase_margin, m.gain_margin, m.max_sensitivity))
+    if np.isfinite(low) and low > 0.0:
+        remarks.append(_lower_limit(low, int(ends.low_by[0]), controller.gain))
+    return Tuning(
+        controller=controller, margins=m, prediction=predict(job.model, controller), binding=binding,
+        reached=reached, remarks=tuple(remarks),
+    )
+
+
+def _time_scales(model: ProcessModel, pattern: Controller) -> Reals:
+    """Give the loop's own times: lags, zeros, dead time, filters [s]."""
+    roots = np.abs(np.concatenate([model.poles, model.zeros]))
+    late = [model.dead_time + 0.5 * pattern.scan + pattern.compute_delay, pattern.pv_filter]
+    scales = np.concatenate([1.0 / roots[roots > 0.0], [x for x in late if x > 0.0]])
+    if scales.size:
+        return scales
+    return np.array([1.0 / abs(model.gain) if model.integrators and model.gain else 1.0])
+
+
+def _evaluate(job: _Job, criteria: Criteria, integral: Reals, derivative: Reals) -> GainRange:
+    shapes = [job.shape(float(i), float(d)) for i, d in zip(integral, derivative, strict=True)]
+    return gain_range(stack_loops([job.model], shapes), criteria, **_SEARCH)
+
+
+def _search(job: _Job, criteria: Criteria) -> tuple[float, float, float] | None:
+    """Search integral and derivative time for the largest speed: a coarse grid, then closer ones."""
+    kind = job.pattern.kind
+    if kind in ("P", "I"):
+        one = np.array([1.0 if kind == "I" else np.inf])
+        r = _evaluate(job, criteria, one, np.zeros(1))
+        return None if np.isnan(r.high[0]) else (float(one[0]), 0.0, float(r.high[0]))
+    low, high = 0.1 * float(job.scales.min()), 60.0 * float(job.scales.sum())
+    shares = np.array([0.0])
+    if kind == "PID":
+        shares = np.array([0.03, 0.08, 0.14, 0.2, MOST_DERIVATIVE])
+    count = {"PI": 36, "PD": 36, "PID": 20}[kind]
+    times = np.geomspace(low, high, count)
+    log_step = float(np.log(times[1] / times[0]))
+    grid_t, grid_s = (g.ravel() for g in np.meshgrid(times, shares, indexing="ij"))
+    best = _pick(job, criteria, grid_t, grid_s)
+    span_s = 0.06
+    for _ in range(3):
+        if best is None or not np.isfinite(best[2]):
+            return None if best is None else _as_times(job, best)
+        t = best[0] * np.exp(np.linspace(-log_step, log_step, 11 if kind != "PID" else 7))
+        s = np.array([best[1]])
+        if kind == "PID":
+            s = np.unique(np.clip(best[1] + np.linspace(-span_s, span_s, 5), 0.005, MOST_DERIVATIVE))
+        grid_t, grid_s = (g.ravel() for g in np.meshgrid(t, s, indexing="ij"))
+        closer = _pick(job, criteria, grid_t, grid_s)
+        best = closer if closer is not None else best
+        log_step, span_s = log_step / 4.0, span_s / 2.0
+    return None if best is None else _as_times(job, best)
+
+
+def _pick(job: _Job, criteria: Criteria, times: Reals, shares: Reals) -> tuple[float, float, float] | None:
+    if job.pattern.kind == "PD":
+        integral, derivative = np.full(times.size, np.inf), times
+    else:
+        integral, derivative = times, shares * times
+    r = _evaluate(job, criteria, integral, derivative)
+    if np.all(np.isnan(r.high)):
+        return None
+    k = int(np.nanargmax(job.speed(r.high, integral)))
+    return float(times[k]), float(shares[k]), float(r.high[k])
+
+
+def _as_times(job: _Job, best: tuple[float, float, float]) -> tuple[float, float, float]:
+    if job.pattern.kind == "PD":
+        return np.inf, best[0], best[2]
+    return best[0], best[1] * best[0], best[2]
+
+
+def _eased(criteria: Criteria, share: float) -> Criteria:
+    """Ask for only a share of every margin: angle, gain margin beyond one, distance 1/Ms."""
+    pm, gm, ms = criteria.phase_margin, criteria.gain_margin, criteria.max_sensitivity
+    return replace(
+        criteria,
+        phase_margin=None if pm is None else pm * share,
+        gain_margin=None if gm is None else gm**share,
+        max_sensitivity=None if ms is None else 1.0 / (share * (1.0 / ms)),
+    )
+
+
+def _best_share(job: _Job, criteria: Criteria) -> tuple[float, tuple[float, float, float] | None]:
+    """Bisect the largest share of all criteria that some settings keep."""
+    low, high, best = 0.0, 1.0, None
+    for _ in range(14):
+        middle = 0.5 * (low + high)
+        found = _search(job, _eased(criteria, middle))
+        if found is None:
+            high = middle
+        else:
+            low, best = middle, found
+    return low, best
+
+
+def _limit_overshoot(
+    job: _Job, criteria: Criteria, start: Controller, low: float
+) -> Controller | None:
+    """Give the fastest settings that also keep the overshoot; `start` itself if it does."""
+    limit = criteria.overshoot
+    assert limit is not None
+    if overshoot(job.model, start) <= limit + _OVERSHOOT_TOLERANCE:
+        return start
+    if job.pattern.kind not in ("PI", "PID"):
+        return _gain_for_overshoot(job.model, start, low, limit)
+    share = start.derivative_time / start.integral_time
+
+    def fastest(log_time: float) -> tuple[float, Controller | None]:
+        time = float(np.exp(log_time))
+        r = gain_range(stack_loops([job.model], [job.shape(time, share * time)]), criteria, **_SEARCH)
+        if not np.isfinite(r.high[0]):
+            return -np.inf, None
+        c = _gain_for_overshoot(
+            job.model, job.shape(time, share * time, float(r.high[0])), float(r.low[0]), limit, coarse=True
+        )
+        return (-np.inf, None) if c is None else (c.gain / time, c)
+
+    centre, width = np.log(start.integral_time), np.log(8.0)
+    tried = [fastest(x) for x in centre + np.linspace(-0.3 * width, width, 8)]
+    at = centre + np.linspace(-0.3 * width, width, 8)
+    k = int(np.argmax([v for v, _ in tried]))
+    if tried[k][1] is None:
+        return None
+    x, value = float(at[k]), tried[k]
+    step = float(at[1] - at[0])
+    for _ in range(4):
+        step *= 0.5
+        for side in (x - step, x + step):
+            other = fastest(side)
+            if other[0] > value[0]:
+                x, value = side, other
+    best = value[1]
+    assert best is not None
+    ends = gain_range(stack_loops([job.model], [replace(best, gain=1.0)]), criteria, exact=True, **_FINAL)
+    if not np.isfinite(ends.high[0]):
+        return None
+    return _gain_for_overshoot(
+        job.model, replace(best, gain=float(ends.high[0])), float(ends.low[0]), limit
+    )
+
+
+def _gain_for_overshoot(
+    model: ProcessModel, top: Controller, low: float, limit: float, *, coarse: bool = False
+) -> Controller | None:
+    """Give the largest gain from the top down at which the overshoot is within the limit."""
+
+    def excess(gain: float) -> float:
+        return overshoot(model, replace(top, gain=gain)) - limit
+
+    above, over = top.gain, excess(top.gain)
+    if over <= 0.0:
+        return top
+    for share in _LADDER[1:]:
+        below = top.gain * float(share)
+        if below < low:
+            return None
+        value = excess(below)
+        if value <= 0.0:
+            break
+        above, over = below, value
+    else:
+        return None
+    return replace(top, gain=_meet(excess, below, value, above, over, 0.3 if coarse else _OVERSHOOT_TOLERANCE))
+
+
+def _meet(
+    f: Callable[[float], float], a: float, fa: float, b: float, fb: float, tolerance: float
+) -> float:
+    """Close in on f = 0 from below by false position with halving (Illinois)."""
+    for _ in range(40):
+        if -fa <= tolerance or abs(b - a) < 1e-9 * abs(b):
+            break
+        x = (a * fb - b * fa) / (fb - fa)
+        # Aim a little low: the answer must keep the limit.
+        x = min(max(x, min(a, b) + 0.02 * abs(b - a)), max(a, b) - 0.02 * abs(b - a))
+        fx = f(x)
+        if fx <= 0.0:
+            a, fa = x, fx
+            fb *= 0.5
+        else:
+            b, fb = x, fx
+    return a
+
+
+def _unreached(job: _Job, criteria: Criteria, pm: float, gm: float, ms: float) -> Caution:
+    model = job.model
+    if model.unstable_poles.size:
+        cure = "The process runs away by itself: less dead time, or derivative action, would raise it."
+    elif model.integrators >= 2 and job.pattern.kind in ("P", "I", "PI"):
+        cure = "A process that integrates twice needs derivative action."
+    elif job.pattern.kind == "I" and model.integrators:
+        cure = "A process that integrates needs proportional action."
+    else:
+        cure = "Less dead time, another kind of controller, or a lower target would reach it."
+    asked = criteria.phase_margin
+    return Caution(
+        code="target-not-reached", level="care", value=pm, limit=asked,
+        text=f"No settings of this controller keep every criterion. The best found reach a phase margin of "
+        f"{pm:.1f} degrees, gain margin {gm:.2f}, Ms {ms:.2f}. {cure}",
+    )
+
+
+def _overshoot_remark(job: _Job, controller: Controller, limit: float) -> Caution:
+    value = overshoot(job.model, controller)
+    softer = overshoot(job.model, replace(controller, setpoint_weight=0.0))
+    cure = (
+        f" With set-point weight 0 it is {softer:.1f} %." if np.isfinite(softer) and softer < value
+        and controller.kind in ("PI", "PID") else " Integral action would remove the offset it is measured from."
+        if controller.kind in ("P", "PD") else ""
+    )
+    return Caution(
+        code="overshoot-not-reached", level="care", value=value, limit=limit,
+        text=f"No gain within the margins keeps the overshoot at {limit:.3g} %; here it is {value:.1f} %.{cure}",
+    )
+
+
+def _lower_limit(low: float, by: int, gain: float) -> Caution:
+    if by == 0:
+        return Caution(
+            code="two-gains", level="note", value=low, limit=gain,
+            text=f"A gain of {low:.4g} has the same phase margin as the upper end of this range, but rolls slowly; "
+            "the fast branch is given. Turning the gain down does not make this loop safer.",
+        )
+    return Caution(
+        code="lower-gain-limit", level="note", value=low, limit=gain,
+        text=f"Below a gain of {low:.4g} this loop no longer keeps its criteria: it needs its gain.",
+    )
+
+
+def _without_settings(job: _Job, remarks: list[Caution]) -> Tuning:
+    """No gain of this kind of controller closes a stable loop: say so, with the gain at nothing."""
+    controller = job.shape(
+        1.0 if job.pattern.kind in ("I", "PI", "PID") else np.inf, 0.0, 1e-12
+    )
+    remarks.append(Caution(
+        code="no-stabilising-gain", level="stop", value=None, limit=None,
+        text=f"No gain of a {job.pattern.kind} controller makes this loop stable. Choose another kind of controller.",
+    ))
+    return Tuning(
+        controller=controller, margins=margins(job.model, controller), prediction=predict(job.model, controller),
+        binding="phase_margin", reached=False, remarks=tuple(remarks),
+    )
