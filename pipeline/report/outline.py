@@ -96,9 +96,10 @@ def _summary(record: Record) -> tuple[Fact, ...]:
         stops = [c for c in record.cautions if c.level == "stop"]
         return tuple(Fact(label="Cause", text=c.text) for c in stops)
     rows = _entries(record.controller.as_entered)
-    rows.append(Fact(label="Controller", text=f"{record.controller.kind}, {record.controller.action} acting"))
+    rows.append(Fact(label="Controller", text=record.controller.kind))
     rows.append(Fact(label="Phase margin", text=degrees(record.margins.phase_margin_deg)))
     rows.append(Fact(label="Predicted overshoot", text=overshoot(record, record.prediction)))
+    rows.append(Fact(label="Action", text=record.action_words or record.controller.action))
     return tuple(rows)
 
 
