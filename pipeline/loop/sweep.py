@@ -20,6 +20,8 @@ if TYPE_CHECKING:
 #: Phase the dead time may turn between two grid points [rad]: below a third of a half turn,
 #: so a crossing is never stepped over and a winding never aliased.
 _TURN = 0.35
+#: Turn of the dead time that is followed whatever the gain [rad]: four turns.
+_ALWAYS = 8.0 * np.pi
 #: Most grid points spent on resolving the dead time [1].
 _MOST_LINEAR = 6000
 #: Rows whose poles and zeros set a shared grid [1]; the others of one structure lie among them.
@@ -69,7 +71,8 @@ def frequency_grid(loops: LoopStack, *, per_decade: int, floor: float) -> Reals:
     per_decade : int
         Points a decade of the logarithmic part.
     floor : float
-        The dead time is resolved up to the last frequency where |L| exceeds this [1].
+        The dead time is resolved up to the last frequency where |L| exceeds this [1], and
+        always through its first four turns.
 
     Returns
     -------
@@ -92,7 +95,7 @@ def frequency_grid(loops: LoopStack, *, per_decade: int, floor: float) -> Reals:
             marks.append(size[size > 0.0])
             light = r[(r.imag > 0.0) & (np.abs(r.real) < 0.3 * size)]
             for root in light:
-                spread = np.sinh(np.linspace(-6.0, 6.0, 61)) * max(abs(root.real), 1e-6 * abs(root))
+                spread = np.sinh(np.linspace(-6.0, 6.0, 61 if m == 1 else 13)) * max(abs(root.real), 1e-6 * abs(root))
                 dense.append(root.imag + spread)
         marks.append(_asymptotes(num, den))
     scale = np.concatenate(marks)
@@ -107,7 +110,8 @@ def frequency_grid(loops: LoopStack, *, per_decade: int, floor: float) -> Reals:
     if delay > 0.0:
         bare = np.abs(_bare(loops, pick, omega)).max(axis=0)
         audible = np.flatnonzero(bare > floor)
-        top = max(omega[audible[-1]] if audible.size else 0.0, 2.0 * np.pi / loops.delay[pick][loops.delay[pick] > 0].min())
+        shortest = float(loops.delay[loops.delay > 0.0].min())
+        top = max(omega[audible[-1]] if audible.size else 0.0, _ALWAYS / shortest)
         start = _TURN / delay
         count = int(min((top - start) * delay / _TURN, _MOST_LINEAR))
         if count > 1:
@@ -262,8 +266,11 @@ def unstable_roots(s: Sweep) -> NDArray[np.float64]:
     last = n - 1 - np.argmax(loud[:, ::-1], axis=1)
     end = np.where(loud.any(axis=1), np.minimum(last + 1, n - 1), 0)
     end = np.where(late, end, n - 1)
-    counted = np.arange(n - 1)[None, :] < end[:, None]
-    lost = _refine(s, step, counted)
+    # Loud beyond where the dead time is followed, hundreds of turns up: far past any stability.
+    followed = int(np.argmin(s.resolved)) if not s.resolved.all() else n - 1
+    runaway = late & ((end > followed) | (direct >= 1.0))
+    counted = (np.arange(n - 1)[None, :] < end[:, None]) & ~runaway[:, None]
+    lost = _refine(s, step, counted) | runaway
 
     f0 = loops.numerator[:, 0] + loops.denominator[:, 0]
     start = np.angle(f[:, 0] * np.where(f0 == 0.0, 1.0, np.sign(f0)))
@@ -283,7 +290,7 @@ def unstable_roots(s: Sweep) -> NDArray[np.float64]:
     total = np.where(late, with_delay, rational)
     order = np.where(late, d_deg, degree)
     count = np.maximum(np.round((order - 2.0 * total / np.pi) / 2.0), 0.0)
-    never = (f0 == 0.0) | lost | (late & (direct >= 1.0)) | (~late & (lead == 0.0))
+    never = (f0 == 0.0) | lost | (~late & (lead == 0.0))
     return np.where(never, np.inf, count)
 
 

@@ -25,7 +25,7 @@ if TYPE_CHECKING:
     Reals = NDArray[np.float64]
 
 #: Grids of the search and of the final answer.
-_SEARCH = {"per_decade": 30, "floor": 0.2}
+_SEARCH = {"per_decade": 24, "floor": np.inf}
 _FINAL = {"per_decade": 80, "floor": 0.02}
 #: A derivative time above a quarter of the integral time has no series equation, so no
 #: controller of that kind could be set to it.
@@ -128,13 +128,13 @@ def tune(
     if best is None:
         return _without_settings(job, remarks)
     integral, derivative, _ = best
-    ends = gain_range(stack_loops([job.model], [job.shape(integral, derivative)]), asked, exact=True, **_FINAL)
-    gain, low = float(ends.high[0]), float(ends.low[0])
-    if not np.isfinite(gain):
-        # The coarse and the fine grid differ about a gap of no width: stay inside the coarse one.
-        gain, low = best[2], 0.0
-    binding = NAMES[int(ends.high_by[0])] if ends.high_by[0] >= 0 else "phase_margin"
-    controller = job.shape(integral, derivative, gain)
+    controller = job.shape(integral, derivative, best[2])
+    ends = _ends(job, controller, asked)
+    low, by = float(ends.low[0]), int(ends.high_by[0])
+    if np.isfinite(ends.high[0]):
+        controller = replace(controller, gain=float(ends.high[0]))
+    # Otherwise the coarse and the fine grid differ about a gap of no width: stay in the coarse one.
+    binding = NAMES[by] if by >= 0 else "phase_margin"
     if criteria.overshoot is not None and reached:
         limited = _limit_overshoot(job, criteria, controller, low)
         if limited is None:
@@ -142,9 +142,7 @@ def tune(
             remarks.append(_overshoot_remark(job, controller, criteria.overshoot))
         elif limited is not controller:
             controller, binding = limited, "overshoot"
-            ends = gain_range(
-                stack_loops([job.model], [replace(controller, gain=1.0)]), asked, exact=True, **_FINAL
-            )
+            ends = _ends(job, controller, asked)
             low = float(ends.low[0])
     elif criteria.overshoot is not None and overshoot(job.model, controller) > criteria.overshoot:
         remarks.append(_overshoot_remark(job, controller, criteria.overshoot))
@@ -154,7 +152,7 @@ def tune(
     if np.isfinite(low) and low > 0.0:
         remarks.append(_lower_limit(low, int(ends.low_by[0]), controller.gain))
     return Tuning(
-        controller=controller, margins=m, prediction=predict(job.model, controller), binding=binding,
+        model=job.model, controller=controller, margins=m, prediction=predict(job.model, controller), binding=binding,
         reached=reached, remarks=tuple(remarks),
     )
 
@@ -172,6 +170,12 @@ def _time_scales(model: ProcessModel, pattern: Controller) -> Reals:
 def _evaluate(job: _Job, criteria: Criteria, integral: Reals, derivative: Reals) -> GainRange:
     shapes = [job.shape(float(i), float(d)) for i, d in zip(integral, derivative, strict=True)]
     return gain_range(stack_loops([job.model], shapes), criteria, **_SEARCH)
+
+
+def _ends(job: _Job, near: Controller, criteria: Criteria) -> GainRange:
+    """Give the exact range of gains for one shape, on a grid that suits a gain near the answer."""
+    r = gain_range(stack_loops([job.model], [near]), criteria, exact=True, **_FINAL)
+    return replace(r, low=r.low * near.gain, high=r.high * near.gain)
 
 
 def _search(job: _Job, criteria: Criteria) -> tuple[float, float, float] | None:
@@ -269,15 +273,14 @@ def _limit_overshoot(
         )
         return (-np.inf, None) if c is None else (c.gain / time, c)
 
-    centre, width = np.log(start.integral_time), np.log(8.0)
-    tried = [fastest(x) for x in centre + np.linspace(-0.3 * width, width, 8)]
-    at = centre + np.linspace(-0.3 * width, width, 8)
+    at = np.log(start.integral_time) + np.linspace(-0.5, 2.0, 6)
+    tried = [fastest(float(x)) for x in at]
     k = int(np.argmax([v for v, _ in tried]))
     if tried[k][1] is None:
         return None
     x, value = float(at[k]), tried[k]
     step = float(at[1] - at[0])
-    for _ in range(4):
+    for _ in range(3):
         step *= 0.5
         for side in (x - step, x + step):
             other = fastest(side)
@@ -285,7 +288,7 @@ def _limit_overshoot(
                 x, value = side, other
     best = value[1]
     assert best is not None
-    ends = gain_range(stack_loops([job.model], [replace(best, gain=1.0)]), criteria, exact=True, **_FINAL)
+    ends = _ends(job, best, criteria)
     if not np.isfinite(ends.high[0]):
         return None
     return _gain_for_overshoot(
@@ -391,6 +394,6 @@ def _without_settings(job: _Job, remarks: list[Caution]) -> Tuning:
         text=f"No gain of a {job.pattern.kind} controller makes this loop stable. Choose another kind of controller.",
     ))
     return Tuning(
-        controller=controller, margins=margins(job.model, controller), prediction=predict(job.model, controller),
+        model=job.model, controller=controller, margins=margins(job.model, controller), prediction=predict(job.model, controller),
         binding="phase_margin", reached=False, remarks=tuple(remarks),
     )

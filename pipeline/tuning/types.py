@@ -10,6 +10,7 @@ import numpy as np
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
+    from fitters.process import ProcessModel
     from pipeline.findings import Caution
     from pipeline.loop.types import Controller, Margins, Prediction
 
@@ -49,6 +50,8 @@ class Tuning:
 
     Attributes
     ----------
+    model : ProcessModel
+        The nominal model as tuned on, its dead time raised to the floor.
     controller : Controller
         Before any back-off for uncertainty.
     margins : Margins
@@ -61,6 +64,7 @@ class Tuning:
         What the reader must know about how these settings came about.
     """
 
+    model: ProcessModel
     controller: Controller
     margins: Margins
     prediction: Prediction
@@ -107,6 +111,10 @@ class BackedOff:
     bands : Bands
     factor : float
         Factor applied to the gain, at most one [1].
+    held : bool
+        False when no factor holds the percentile phase margin; the factor then comes nearest.
+    remarks : tuple of Caution
+        What the reader must know about the back-off.
     """
 
     controller: Controller
@@ -114,3 +122,5 @@ class BackedOff:
     prediction: Prediction
     bands: Bands
     factor: float
+    held: bool
+    remarks: tuple[Caution, ...]

@@ -1,0 +1,178 @@
+"""The same settings on every plausible model, and the back-off that follows."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import replace
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from pipeline.findings import Caution
+from pipeline.loop.batch_response import batch_overshoot, batch_setpoint
+from pipeline.loop.controller import feedback_path, setpoint_path
+from pipeline.loop.margins import MarginTable, margin_table, margins
+from pipeline.loop.metrics import final_value
+from pipeline.loop.simulate import predict
+from pipeline.loop.stack import LoopStack, stack_loops
+from pipeline.tuning.types import BackedOff, Bands
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+    from fitters.process import ProcessModel
+    from pipeline.loop.types import Controller
+    from pipeline.tuning.types import Criteria, Tuning
+
+    Reals = NDArray[np.float64]
+
+#: Percentiles of a band [%].
+_PERCENTILES = (5.0, 50.0, 95.0)
+#: Points of the step band [1].
+_POINTS = 320
+#: Horizon of the step band over the median model's settling time [1].
+_HORIZON = 3.0
+#: Gain factors tried before the exact one is closed in on [1].
+_FACTORS = np.geomspace(1.0, 0.1, 14)
+#: The factor is found to this [1].
+_FACTOR_TOLERANCE = 1e-3
+
+
+def bands(models: Sequence[ProcessModel], controller: Controller) -> Bands:
+    """Give one controller's margins and step response over plausible models.
+
+    Parameters
+    ----------
+    models : sequence of ProcessModel
+        Draws of one structure, at least one.
+    controller : Controller
+
+    Returns
+    -------
+    Bands
+    """
+    table = margin_table(stack_loops(models, [controller]))
+    return _bands(models, controller, table)
+
+
+def _bands(models: Sequence[ProcessModel], controller: Controller, table: MarginTable) -> Bands:
+    stable = np.flatnonzero(table.stable)
+    over = np.full(len(models), np.inf)
+    if stable.size:
+        kept = [models[i] for i in stable]
+        middle = kept[int(np.argsort(table.phase_margin[stable])[stable.size // 2])]
+        nominal = predict(middle, controller)
+        end = float(nominal.setpoint.t[-1])
+        settled = nominal.settling_time if np.isfinite(nominal.settling_time) else end
+        horizon = min(_HORIZON * settled, 2.0 * end)
+        t, pv = batch_setpoint(kept, [controller], horizon=horizon, points=_POINTS)
+        over[stable] = batch_overshoot(pv, np.array([_final(g, controller) for g in kept]))
+        low, high = np.percentile(pv, [_PERCENTILES[0], _PERCENTILES[2]], axis=0)
+    else:
+        t = low = high = np.zeros(0)
+    return Bands(
+        phase_margin=_three(table.phase_margin),
+        gain_margin=_three(table.gain_margin),
+        max_sensitivity=_three(table.max_sensitivity),
+        overshoot=_three(over),
+        unstable_share=1.0 - stable.size / len(models),
+        t=_frozen(t), low=_frozen(low), high=_frozen(high),
+    )
+
+
+def _final(model: ProcessModel, controller: Controller) -> float:
+    num, den = model.numerator, model.denominator
+    sp, fb = setpoint_path(controller), feedback_path(controller)
+    return final_value(
+        (np.polymul(sp[0], num), np.polymul(sp[1], den)), (np.polymul(fb[0], num), np.polymul(fb[1], den))
+    )
+
+
+def _frozen(x: Reals) -> Reals:
+    out = np.array(x, dtype=float)
+    out.flags.writeable = False
+    return out
+
+
+def _three(x: Reals) -> tuple[float, float, float]:
+    """Give the percentiles, counted rather than interpolated so that infinities keep their place."""
+    a, b, c = (float(np.percentile(x, p, method="inverted_cdf")) for p in _PERCENTILES)
+    return a, b, c
+
+
+def _held(loops: LoopStack, factor: float, percentile: float) -> float:
+    """Give the phase margin at a percentile of the models, the gain multiplied by a factor."""
+    table = margin_table(loops.scaled(np.full(len(loops), factor)), sensitivity=False)
+    return float(np.percentile(table.phase_margin, percentile, method="inverted_cdf"))
+
+
+def back_off(tuning: Tuning, models: Sequence[ProcessModel], criteria: Criteria) -> BackedOff:
+    """Lower the gain until the percentile phase margin holds.
+
+    Parameters
+    ----------
+    tuning : Tuning
+    models : sequence of ProcessModel
+        Plausible models of one structure.
+    criteria : Criteria
+
+    Returns
+    -------
+    BackedOff
+        The largest factor up to one on the gain that holds the phase margin at the
+        percentile. `held` is False where no factor does, as on loops that need their gain;
+        the factor is then the one that comes nearest, and a remark says so.
+    """
+    loops = stack_loops(models, [tuning.controller])
+    asked = criteria.percentile_phase_margin
+    factor, held = 1.0, True
+    remarks: list[Caution] = []
+    if asked is not None:
+        factor, held, best = _factor(loops, criteria.percentile, asked)
+        if not held:
+            remarks.append(Caution(
+                code="back-off-not-enough", level="care", value=best, limit=asked,
+                text=f"No lower gain holds a phase margin of {asked:.3g} degrees at the {criteria.percentile:.3g}th "
+                f"percentile of the plausible models; the nearest, {best:.1f} degrees, is at {factor:.2f} of the gain. "
+                "A better test would narrow the models.",
+            ))
+    controller = replace(tuning.controller, gain=tuning.controller.gain * factor)
+    table = margin_table(loops.scaled(np.full(len(loops), factor)))
+    return BackedOff(
+        controller=controller,
+        margins=tuning.margins if factor == 1.0 else margins(tuning.model, controller),
+        prediction=tuning.prediction if factor == 1.0 else predict(tuning.model, controller),
+        bands=_bands(models, controller, table),
+        factor=factor, held=held, remarks=tuple(remarks),
+    )
+
+
+def _factor(loops: LoopStack, percentile: float, asked: float) -> tuple[float, bool, float]:
+    """Give the largest factor that holds, whether one does, and the phase margin there."""
+    above = 1.0
+    value = _held(loops, 1.0, percentile)
+    if value >= asked:
+        return 1.0, True, value
+    best = (value, 1.0)
+    over = value
+    for x in _FACTORS[1:]:
+        value = _held(loops, float(x), percentile)
+        if value >= asked:
+            break
+        if value > best[0]:
+            best = (value, float(x))
+        above, over = float(x), value
+    else:
+        return best[1], False, best[0]
+    below, under = float(x), value
+    while above - below > _FACTOR_TOLERANCE:
+        guess = below + (above - below) * (under - asked) / max(under - over, 1e-12)
+        guess = min(max(guess, below + 0.1 * (above - below)), above - 0.1 * (above - below))
+        value = _held(loops, guess, percentile)
+        if value >= asked:
+            below, under = guess, value
+            if value - asked < 0.02:
+                break
+        else:
+            above, over = guess, value
+    return below, True, under
