@@ -125,7 +125,7 @@ def _common_noise(estimates: list[Estimate], data: BumpData, used: NDArray[np.bo
 
 
 def _criterion(estimate: Estimate, data: BumpData, used: NDArray[np.bool_], noise: Noise) -> float:
-    rss = whitened_sum(estimate.residual[used], data.t[used], noise.correlation)
+    rss = whitened_sum(estimate.residual[used], data.t[used], noise)
     count = int(np.count_nonzero(used))
     floor = count * (_ARITHMETIC * float(np.ptp(data.pv))) ** 2
     parameters = estimate.structure.parameter_count

@@ -29,12 +29,12 @@ _SIMPLE = 2
 _SAME_COST = 1e-3
 #: A minimum this close to the deepest one is a rival to be named [1].
 _RIVAL_COST = 0.02
-#: Evaluations after which a screening, and a search, is given up.
+#: Evaluations after which a screening, and a search, is given up; a search needs 10 to 30.
 _SCREENING_EVALUATIONS = 25
-_MOST_EVALUATIONS = 200
+_MOST_EVALUATIONS = 100
 #: Relative change of cost at which screening is content, and at which a search has settled [1].
 _SCREENING_TOLERANCE = 1e-4
-_SETTLED_TOLERANCE = 1e-13
+_SETTLED_TOLERANCE = 1e-9
 #: Costs per row below this, in squared spreads of the PV, are all a perfect fit [1].
 _PERFECT = 1e-16
 #: Flat stretches of the cost looked at for a pure dead time.

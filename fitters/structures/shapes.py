@@ -154,11 +154,17 @@ def pair(tau: NDArray[np.float64], log_time: float, log_damping: float) -> Shape
     even_by_zeta = -x * even + zeta * x * odd
     odd_by_zeta = -x * odd + 2.0 * zeta * odd_by_square
     step_by_zeta = -(even_by_zeta + odd + zeta * odd_by_zeta)
-    value = np.stack([step, rate / time_s])
-    by_time = np.stack([rate / time_s, rate_by_x / time_s**2])
-    by_log_time = np.stack([-x * rate, -(rate + x * rate_by_x) / time_s])
-    by_log_zeta = np.stack([step_by_zeta * zeta, odd_by_zeta * zeta / time_s])
-    return Shapes(value, by_time, np.stack([by_log_time, by_log_zeta]))
+    value = np.empty((2, *x.shape))
+    by_time = np.empty_like(value)
+    by_search = np.empty((2, 2, *x.shape))
+    value[0] = step
+    value[1] = by_time[0] = rate / time_s
+    by_time[1] = rate_by_x / time_s**2
+    by_search[0, 0] = -x * rate
+    by_search[0, 1] = -(rate + x * rate_by_x) / time_s
+    by_search[1, 0] = step_by_zeta * zeta
+    by_search[1, 1] = odd_by_zeta * (zeta / time_s)
+    return Shapes(value, by_time, by_search)
 
 
 def _even_and_odd(
