@@ -23,6 +23,8 @@ if TYPE_CHECKING:
 
 #: A drift within this many standard errors of none is left out [1].
 _DRIFT_SURE = 2.0
+#: A structure's leading gain within this many standard errors of none takes it out of the running [1].
+_GAIN_SURE = 2.0
 #: Candidates with less weight than this are listed but not refined further [1].
 _WEIGHT_THAT_COUNTS = 0.01
 #: At least this many structures are settled from several starts, and all within this distance.
@@ -64,7 +66,8 @@ def choose(data: BumpData) -> Choice:
         screened = _screen_all(data, used)
     estimates = _settle_contenders(data, used, screened)
     noise = _common_noise(estimates, data, used)
-    ranked = sorted(estimates, key=lambda e: _criterion(e, data, used, noise))
+    sure = [e for e in estimates if _leading_gain_sure(e, data, used, noise)]
+    ranked = sorted(sure or estimates, key=lambda e: _criterion(e, data, used, noise))
     scores = np.array([_criterion(e, data, used, noise) for e in ranked])
     weights = np.exp(-0.5 * (scores - scores[0]))
     weights /= weights.sum()
@@ -132,6 +135,16 @@ def _criterion(estimate: Estimate, data: BumpData, used: NDArray[np.bool_], nois
     return count * float(np.log(max(rss, floor) / count)) + parameters * float(
         np.log(max(noise.effective_samples, 2.0))
     )
+
+
+def _leading_gain_sure(estimate: Estimate, data: BumpData, used: NDArray[np.bool_], noise: Noise) -> bool:
+    """Tell whether the gain that gives the structure its name can be told from none.
+
+    An integrator with a zero, say, whose integrating gain may be zero is a first order in disguise.
+    """
+    place = estimate.structure.searched + 1
+    variance = covariance(estimate.jacobian, data.t[used], noise)[place, place]
+    return bool(abs(estimate.gains[0]) > _GAIN_SURE * np.sqrt(variance))
 
 
 def _drift_matters(estimate: Estimate, data: BumpData, used: NDArray[np.bool_]) -> bool:

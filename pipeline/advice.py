@@ -6,7 +6,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from pipeline.loop.forms import action_words
+from pipeline.loop.forms import action_in_words
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -50,7 +50,7 @@ def after_settings(
     return (
         "Write down the settings found in the controller before anything is changed.",
         "Enter the settings with the controller in manual, and read them back.",
-        f"Check the control action. {action_words(backed_off.controller.action)}.",
+        f"Check the control action. {action_in_words(backed_off.controller.action)}",
         f"Switch to automatic and make a set-point step of about {step:.2g} {pv_unit}, first one way and then "
         "the other.",
         f"Expect {peak}an overshoot of {max(bands.overshoot[0], 0.0):.0f} to {bands.overshoot[2]:.0f} % "
@@ -90,7 +90,9 @@ def after_withholding(log: Log, bumps: Sequence[Bump], fit: Fit | None, co_unit:
     elif bumps:
         moved = max((abs(m.after - m.before) for b in bumps for m in b.moves), default=0.0)
         if moved > 0.0:
-            steps.append(f"Move the output by more than the {moved:.2g} {co_unit} of this test, if there is room.")
+            steps.append(
+                f"Move the output by more than the {moved:.2g} {co_unit} of this test, if there is room."
+            )
     steps.append(
         "Make at least two moves up and two down, log the raw PV and the output at the controller's scan, "
         "without compression, and note every event with its time."

@@ -1,0 +1,201 @@
+"""The main job, as it is done on site: a bump-test log in, settings and their evidence out."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from datetime import UTC, datetime
+from typing import TYPE_CHECKING
+
+from fitters.choose import choose
+from pipeline import __version__, advice
+from pipeline.bumps import Bump, bump_data, find_bumps
+from pipeline.cautions import Facts, cautions
+from pipeline.intake import read_log
+from pipeline.record import Made, Record, build, parts
+from pipeline.settings import LoopSheet
+from pipeline.testquality import Quality, judge
+from pipeline.tuning.recommend import Recommended, Wanted, as_found, recommend, tune_model, wanted
+
+if TYPE_CHECKING:
+    from pathlib import Path
+
+    from fitters.fit import BumpData, Choice
+    from pipeline.intake.log import Log
+    from pipeline.loop.types import Kind
+
+#: A rival structure with at least this weight is tuned too, to see what it would change [1].
+_RIVAL_WEIGHT = 0.05
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Request:
+    """What the user asks besides the log; None is "not given".
+
+    Attributes
+    ----------
+    sheet : LoopSheet or None
+    controller : {"P", "I", "PI", "PD", "PID"} or None
+    phase_margin : float or None
+        [degrees].
+    gain_margin, max_sensitivity : float or None
+        [1].
+    overshoot : float or None
+        [%].
+    """
+
+    sheet: LoopSheet | None = None
+    controller: Kind | None = None
+    phase_margin: float | None = None
+    gain_margin: float | None = None
+    max_sensitivity: float | None = None
+    overshoot: float | None = None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Inspection:
+    """What was understood of a log.
+
+    Attributes
+    ----------
+    log : Log
+    bumps : tuple of Bump
+    quality : Quality
+    """
+
+    log: Log
+    bumps: tuple[Bump, ...]
+    quality: Quality
+
+
+def inspect(path: Path, *, request: Request) -> Inspection:
+    """Read a log and judge the test in it.
+
+    Parameters
+    ----------
+    path : Path
+    request : Request
+
+    Raises
+    ------
+    LogUnreadable
+        If the file cannot be turned into times and values, or in two ways.
+    """
+    sheet = request.sheet or LoopSheet()
+    log = read_log(path, sheet=sheet)
+    bumps = find_bumps(log)
+    return Inspection(log=log, bumps=bumps, quality=judge(log, bumps, sheet=sheet))
+
+
+def commission(path: Path, *, request: Request) -> Record:
+    """Turn a bump-test log into settings, or say why not.
+
+    Parameters
+    ----------
+    path : Path
+    request : Request
+
+    Returns
+    -------
+    Record
+        With the verdict "withheld" and no settings where the test does not support a gain.
+
+    Raises
+    ------
+    LogUnreadable
+        If the log cannot be read.
+    UsageError
+        If the loop sheet asks for what cannot be.
+    ChecksDisagree
+        If two computations of one answer differ.
+    """
+    sheet = request.sheet or LoopSheet()
+    asked = wanted(
+        sheet,
+        kind=request.controller,
+        phase_margin=request.phase_margin,
+        gain_margin=request.gain_margin,
+        max_sensitivity=request.max_sensitivity,
+        overshoot_pct=request.overshoot,
+    )
+    seen = inspect(path, request=request)
+    data: BumpData | None = None
+    choice: Choice | None = None
+    recommended: Recommended | None = None
+    if seen.quality.verdict != "do not use":
+        data = bump_data(seen.log, seen.bumps)
+        choice = choose(data)
+        if not _stops(_facts(seen, sheet, asked, choice, None)):
+            recommended = recommend(choice.best, asked, log_interval=seen.log.interval)
+    return _record(seen, sheet, asked, data, choice, recommended)
+
+
+def _facts(
+    seen: Inspection, sheet: LoopSheet, asked: Wanted, choice: Choice | None, made: Recommended | None
+) -> Facts:
+    return Facts(
+        log=seen.log,
+        sheet=sheet,
+        quality=seen.quality,
+        choice=choice,
+        criteria=asked.criteria,
+        tuning=None if made is None else made.tuning,
+        backed_off=None if made is None else made.backed_off,
+        dead_time_floor=0.0 if made is None else made.dead_time_floor,
+    )
+
+
+def _stops(facts: Facts) -> bool:
+    return any(caution.level == "stop" for caution in cautions(facts))
+
+
+def _record(
+    seen: Inspection,
+    sheet: LoopSheet,
+    asked: Wanted,
+    data: BumpData | None,
+    choice: Choice | None,
+    made: Recommended | None,
+) -> Record:
+    """Write down what was found; settings only where nothing stops them."""
+    facts = _facts(seen, sheet, asked, choice, made)
+    pv_unit = sheet.pv.unit or seen.log.pv_column.unit
+    co_unit = sheet.co.unit or seen.log.co_column.unit
+    settings = None
+    if choice is not None and made is not None and not _stops(facts):
+        found = as_found(choice.best, sheet, asked, made.dead_time_floor)
+        settings = build.settings(made.tuning, made.backed_off, asked.entry, found, pv_unit, co_unit)
+        steps = advice.after_settings(made.backed_off, seen.bumps, sheet, pv_unit or "PV units", choice.best)
+    else:
+        fit = None if choice is None else choice.best
+        steps = advice.after_withholding(seen.log, seen.bumps, fit, co_unit or "CO units")
+    identified = None
+    if choice is not None:
+        gains = _rival_gains(choice, asked, made)
+        identified = build.identified(choice, gains, pv_unit or "PV", co_unit or "CO")
+    return build.assemble(
+        made=Made(
+            program="firstgain", version=__version__, created=datetime.now(UTC).isoformat(timespec="seconds")
+        ),
+        sheet=sheet,
+        log=parts.log_info(seen.log, "open-loop"),
+        bumps=parts.bump_infos(seen.bumps),
+        quality=parts.quality_info(seen.quality),
+        criteria=asked.criteria,
+        cautions=cautions(facts),
+        next_steps=steps,
+        shown=parts.series(seen.log, data, None if choice is None else choice.best, pv_unit, co_unit),
+        identified=identified,
+        settings=settings,
+    )
+
+
+def _rival_gains(choice: Choice, asked: Wanted, made: Recommended | None) -> dict[str, float]:
+    """Give the controller gain that each believable structure would lead to, before any back-off."""
+    if made is None:
+        return {}
+    gains = {choice.best.structure: made.tuning.controller.gain}
+    for rival in choice.candidates[1:]:
+        if rival.weight >= _RIVAL_WEIGHT:
+            tuning = tune_model(rival.fit.model, asked, dead_time_floor=made.dead_time_floor)
+            gains[rival.fit.structure] = tuning.controller.gain
+    return gains
