@@ -10,6 +10,7 @@ import numpy as np
 from pipeline.errors import UsageError
 
 if TYPE_CHECKING:
+    from fitters.process import ProcessModel
     from pipeline.loop.types import Action, Controller
 
 Equation = Literal["standard", "series", "parallel"]
@@ -274,6 +275,28 @@ def action_for(process_gain: float) -> Action:
     if process_gain == 0.0 or not np.isfinite(process_gain):
         raise UsageError("A process gain of zero has no controller action.")
     return "reverse" if process_gain > 0.0 else "direct"
+
+
+def action_for_model(model: ProcessModel) -> Action:
+    """Give the action that can stabilise a process.
+
+    Parameters
+    ----------
+    model : ProcessModel
+
+    Returns
+    -------
+    {"reverse", "direct"}
+        From the sign of the gain; each real pole in the right half-plane turns it round, as
+        a process that runs away moves, at first, against the sign of its static gain.
+
+    Raises
+    ------
+    UsageError
+        If the gain is zero.
+    """
+    flips = int(np.sum(np.abs(model.unstable_poles.imag) <= 1e-9 * np.abs(model.unstable_poles)))
+    return action_for(model.gain * (-1.0) ** flips)
 
 
 def action_in_words(action: Action) -> str:

@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from pipeline.findings import Caution
+from pipeline.loop.forms import action_for_model
 from pipeline.loop.margins import margins
 from pipeline.loop.simulate import overshoot, predict
 from pipeline.loop.stack import stack_loops
@@ -102,9 +103,8 @@ def tune(
     PID keeps Ti >= 4 Td, so that every controller equation can hold the result.
     """
     held = replace(model, dead_time=max(model.dead_time, dead_time_floor))
-    action = "reverse" if model.gain >= 0.0 else "direct"
     pattern = Controller(
-        kind=kind, gain=1.0, action=action,  # type: ignore[arg-type]
+        kind=kind, gain=1.0, action=action_for_model(model),
         setpoint_weight=setpoint_weight, derivative_setpoint_weight=derivative_setpoint_weight,
         pv_filter=pv_filter, scan=scan, compute_delay=compute_delay,
     )
@@ -124,9 +124,10 @@ def tune(
     share = 1.0
     if best is None:
         share, best = _best_share(job, criteria)
+        if best is None:
+            return _without_settings(job, remarks)
         asked = _eased(criteria, share)
-    if best is None:
-        return _without_settings(job, remarks)
+    assert best is not None
     integral, derivative, _ = best
     controller = job.shape(integral, derivative, best[2])
     ends = _ends(job, controller, asked)
