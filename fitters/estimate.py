@@ -1,8 +1,8 @@
 """One structure fitted to one test: the search, and what it found.
 
-lmfit runs the steps, with analytic derivatives, over the few numbers that enter
-non-linearly. Every structure is first screened from its most promising start with loose
-tolerances; those that stay in the running are settled from several dead times to the last digit.
+Every structure is first screened by a few damped steps from its most promising starts. For
+those that stay in the running lmfit runs the search to its end, with analytic derivatives,
+over the few numbers that enter non-linearly, and from several dead times.
 """
 
 from __future__ import annotations
@@ -29,12 +29,18 @@ _SIMPLE = 2
 _SAME_COST = 1e-3
 #: A minimum this close to the deepest one is a rival to be named [1].
 _RIVAL_COST = 0.02
-#: Evaluations after which a screening, and a search, is given up; a search needs 10 to 30.
-_SCREENING_EVALUATIONS = 25
+#: Evaluations after which a search is given up; it needs 10 to 30.
 _MOST_EVALUATIONS = 100
-#: Relative change of cost at which screening is content, and at which a search has settled [1].
-_SCREENING_TOLERANCE = 1e-4
+#: Relative change of cost and of parameters at which a search has settled [1].
 _SETTLED_TOLERANCE = 1e-9
+#: The approach: steps at most, relative gain at which it is content, damping and its changes [1].
+_APPROACH_STEPS = 14
+_APPROACH_TOLERANCE = 1e-3
+_FIRST_DAMPING = 1e-3
+_HARDER = 10.0
+_EASIER = 5.0
+#: A searched logarithm moves at most this far in one step: a factor of about four.
+_LONGEST_LOG_STEP = 1.4
 #: Costs per row below this, in squared spreads of the PV, are all a perfect fit [1].
 _PERFECT = 1e-16
 #: Flat stretches of the cost looked at for a pure dead time.
@@ -138,7 +144,7 @@ def screen(problem: Problem, structure: Structure) -> Screened:
         cost = float(problem.costs(structure, np.empty(0), np.array([dead_time]))[0])
         return Screened(structure=structure, end=(np.empty(0), dead_time), cost=cost, starts=starts)
     many = structure.searched + structure.gains > _SIMPLE
-    ends = [_refine(problem, structure, start, quick=True) for start in (starts if many else starts[:1])]
+    ends = [_approach(problem, structure, start) for start in (starts if many else starts[:1])]
     end = min(ends, key=lambda e: e.cost)
     return Screened(structure=structure, end=(end.search, end.dead_time), cost=end.cost, starts=starts)
 
@@ -161,17 +167,17 @@ def settle(problem: Problem, screened: Screened, *, several: bool = True) -> Est
     if not structure.has_dead_time_search:
         only = _End(np.empty(0), screened.end[1], screened.cost, True)
         return _collect(problem, structure, only, [only], hold=True)
-    ends = [_refine(problem, structure, screened.end, quick=False)]
+    ends = [_refine(problem, structure, screened.end)]
     if several:
         for start in screened.starts[1:]:
-            rough = _refine(problem, structure, start, quick=True)
+            rough = _approach(problem, structure, start)
             if rough.cost < ends[0].cost * (1.0 - _SAME_COST):
-                rough = _refine(problem, structure, (rough.search, rough.dead_time), quick=False)
+                rough = _refine(problem, structure, (rough.search, rough.dead_time))
             ends.append(rough)
         ends.sort(key=lambda end: end.cost)
     best = ends[0]
     if best.dead_time < 0.0:
-        held = _refine(problem, structure, (best.search, 0.0), quick=False, hold=True)
+        held = _refine(problem, structure, (best.search, 0.0), hold=True)
         return _collect(problem, structure, held, ends, hold=True)
     return _collect(problem, structure, best, ends, hold=False)
 
@@ -192,7 +198,32 @@ def as_screened(problem: Problem, screened: Screened) -> Estimate:
     return _collect(problem, screened.structure, end, [end], hold=end.dead_time < 0.0)
 
 
-def _refine(problem: Problem, structure: Structure, start: Start, *, quick: bool, hold: bool = False) -> _End:
+def _approach(problem: Problem, structure: Structure, start: Start) -> _End:
+    """Take a few damped Gauss-Newton steps (Levenberg 1944, Marquardt 1963): enough to rank a structure."""
+    point = np.append(start[0], start[1])
+    residual, slopes = problem.project(structure, point[:-1], float(point[-1]))
+    cost = float(residual @ residual)
+    damping = _FIRST_DAMPING
+    for _ in range(_APPROACH_STEPS):
+        curvature = slopes @ slopes.T
+        damped = curvature + damping * np.diag(np.diag(curvature) + 1e-300)
+        step = np.linalg.lstsq(damped, -(slopes @ residual), rcond=None)[0]
+        step[:-1] = np.clip(step[:-1], -_LONGEST_LOG_STEP, _LONGEST_LOG_STEP)
+        trial = point + step
+        new_residual, new_slopes = problem.project(structure, trial[:-1], float(trial[-1]))
+        new_cost = float(new_residual @ new_residual)
+        if not new_cost < cost:
+            damping *= _HARDER
+            continue
+        settled = new_cost > cost * (1.0 - _APPROACH_TOLERANCE)
+        point, residual, slopes, cost = trial, new_residual, new_slopes, new_cost
+        damping /= _EASIER
+        if settled:
+            break
+    return _End(limited(point[:-1]), float(point[-1]), cost, True)
+
+
+def _refine(problem: Problem, structure: Structure, start: Start, *, hold: bool = False) -> _End:
     """Run lmfit's Levenberg-Marquardt from one start; `hold` keeps the dead time."""
     names = [f"q{k}" for k in range(structure.searched)]
     if hold and not names:
@@ -216,15 +247,14 @@ def _refine(problem: Problem, structure: Structure, start: Start, *, quick: bool
         slopes = evaluate(values)[1]
         return slopes[:-1] if hold else slopes
 
-    tolerance = _SCREENING_TOLERANCE if quick else _SETTLED_TOLERANCE
     result = lmfit.Minimizer(
         lambda values: evaluate(values)[0], parameters, calc_covar=False, nan_policy="propagate"
     ).leastsq(
         Dfun=slopes_of,
         col_deriv=True,
-        max_nfev=_SCREENING_EVALUATIONS if quick else _MOST_EVALUATIONS,
-        ftol=tolerance,
-        xtol=tolerance,
+        max_nfev=_MOST_EVALUATIONS,
+        ftol=_SETTLED_TOLERANCE,
+        xtol=_SETTLED_TOLERANCE,
         gtol=0.0,
     )
     search = limited(np.array([result.params[name].value for name in names]))

@@ -30,9 +30,9 @@ _MAD_TO_SD = 1.4826
 #: Correlation times looked at: from this many log intervals to this share of the record.
 _SHORTEST_CORRELATION = 0.3
 _LONGEST_CORRELATION = 0.5
-_CORRELATION_GRID = 9
+_CORRELATION_GRID = 8
 #: Slow shares of the variance looked at [1].
-_SHARES = np.array([0.1, 0.3, 0.6, 0.85, 1.0])
+_SHARES = np.array([0.15, 0.5, 1.0])
 #: Slow noise must improve twice the log likelihood by this much: little, since missing
 #: it costs more than imagining it.
 _COLOUR_GAIN = 1.0
