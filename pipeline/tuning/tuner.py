@@ -249,6 +249,17 @@ def _best_share(job: _Job, criteria: Criteria) -> tuple[float, tuple[float, floa
             high = middle
         else:
             low, best = middle, found
+    if best is None:
+        return low, best
+    # The search's coarse grid closes a gap a little early: press on with the exact one.
+    high = min(1.0, low * 1.01)
+    for _ in range(10):
+        middle = 0.5 * (low + high)
+        ends = _ends(job, job.shape(*best), _eased(criteria, middle))
+        if np.isfinite(ends.high[0]):
+            low, best = middle, (best[0], best[1], float(ends.high[0]))
+        else:
+            high = middle
     return low, best
 
 
