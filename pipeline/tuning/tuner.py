@@ -145,6 +145,9 @@ def tune(
             controller, binding = limited, "overshoot"
             ends = _ends(job, controller, asked)
             low = float(ends.low[0])
+            if abs(float(ends.high[0]) / controller.gain - 1.0) < 1e-6 and ends.high_by[0] >= 0:
+                # A longer integral time brought the overshoot down; there a margin binds again.
+                binding = NAMES[int(ends.high_by[0])]
     elif criteria.overshoot is not None and overshoot(job.model, controller) > criteria.overshoot:
         remarks.append(_overshoot_remark(job, controller, criteria.overshoot))
     m = margins(job.model, controller)

@@ -21,7 +21,7 @@ def loops(draw, dead=True):
     den = np.polymul([draw(log), 1.0], [draw(log), 1.0])
     if draw(st.booleans()):
         den = np.polymul(den, [1.0, 0.0])
-    num = (draw(st.floats(-1.0, 1.0)), 1.0)
+    num = (draw(st.floats(-1.0, 1.0).map(lambda x: round(x, 2))), 1.0)
     model = ProcessModel(numerator=num, denominator=tuple(den), dead_time=draw(log) if dead else 0.0)
     td = 0.2 * draw(log)
     c = Controller(kind="PID", gain=draw(log), action="reverse", integral_time=4.0 * draw(log),
