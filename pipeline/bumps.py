@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -119,6 +120,8 @@ def find_bumps(log: Log) -> tuple[Bump, ...]:
             groups[-1].append(move)
         else:
             groups.append([move])
+    if not groups:
+        return ()
     starts = [float(log.t[0]), *(group[-1].at_s for group in groups[:-1])]
     ends = [*(group[0].at_s for group in groups[1:]), float(log.t[-1])]
     return tuple(
@@ -193,7 +196,7 @@ def _holds_between(log: Log, moves: list[Move]) -> bool:
         return False
     edges = [float(log.t[0]), *(m.at_s for m in moves), np.inf]
     spans = []
-    for start, end in zip(edges[:-1], edges[1:], strict=True):
+    for start, end in pairwise(edges):
         held = log.co[(log.t >= start) & (log.t < end)]
         spans.append(float(np.ptp(np.percentile(held, [5.0, 95.0]))) if held.size else 0.0)
     typical_move = float(np.median([abs(m.after - m.before) for m in moves]))
