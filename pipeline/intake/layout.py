@@ -15,15 +15,13 @@ from pipeline.intake.names import is_unit, split_unit
 _MARKS = """- -- --- * ? nan na n/a null none nil bad invalid error err fault timeout inf -inf +inf infinity
 +infinity -infinity 1.#j 1.#inf -1.#inf 1.#ind -1.#ind 1.#qnan #n/a #value! #num! #div/0! overflow over under
 shutdown"""
+_MARKS = (
+    "-|--|---|*|?|nan|na|n/a|null|none|nil|bad|bad input|bad quality|no data|invalid|error|err|fault|timeout"
+    "|i/o timeout|inf|-inf|+inf|infinity|-infinity|1.#j|1.#inf|-1.#inf|1.#ind|-1.#ind|1.#qnan|#n/a|#value!"
+    "|#num!|#div/0!|overflow|over|under|shutdown|not connected"
+)
 #: Cells that stand for "no value": blanks and what loggers write for a bad reading.
-MISSING = frozenset(_MARKS.split()) | {
-    "",
-    "bad input",
-    "bad quality",
-    "no data",
-    "i/o timeout",
-    "not connected",
-}
+MISSING = ("", *_MARKS.split("|"))
 
 #: Delimiters in order of preference: a blank also stands inside dates and names, a comma inside numbers.
 _DELIMITERS = ("\t", ";", ",", "|", " ")
