@@ -64,22 +64,15 @@ def batch_setpoint(
     """
     m = max(len(models), len(controllers))
     rows = [(models[i % len(models)], controllers[i % len(controllers)]) for i in range(m)]
-    sp_num, sp_den, fb_num, fb_den, g_num, g_den = (
-        _stacked([pick(g, c) for g, c in rows])
-        for pick in (
-            lambda g, c: setpoint_path(c)[0],
-            lambda g, c: setpoint_path(c)[1],
-            lambda g, c: feedback_path(c)[0],
-            lambda g, c: feedback_path(c)[1],
-            lambda g, c: np.asarray(g.numerator),
-            lambda g, c: np.asarray(g.denominator),
-        )
-    )
+    sp_num, sp_den = (_stacked([setpoint_path(c)[i] for _, c in rows]) for i in (0, 1))
+    fb_num, fb_den = (_stacked([feedback_path(c)[i] for _, c in rows]) for i in (0, 1))
+    g_num = _stacked([np.asarray(g.numerator) for g, _ in rows])
+    g_den = _stacked([np.asarray(g.denominator) for g, _ in rows])
     delay = np.array([g.dead_time + extra_dead_time(c) for g, c in rows])
     period = 2.0 * horizon
     count = 2 * points
     a = _DAMPING / period
-    s = a + 2j * np.pi / period * np.arange(points + 1)
+    s = np.asarray(a + 2j * np.pi / period * np.arange(points + 1), dtype=complex)
     late = np.exp(-delay[:, None] * s)
     g = _at(g_num, s) / _at(g_den, s) * late
     forced = g * _at(sp_num, s) / _at(sp_den, s)

@@ -22,8 +22,8 @@ if TYPE_CHECKING:
     Reals = NDArray[np.float64]
 
 #: Grid of one loop and of a batch: points a decade [1], and |L| down to which the dead time is followed [1].
-_FINE = {"per_decade": 80, "floor": 0.02}
-_COARSE = {"per_decade": 40, "floor": 0.15}
+_FINE = (80, 0.02)
+_COARSE = (40, 0.15)
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -66,7 +66,7 @@ def margins(model: ProcessModel, controller: Controller) -> Margins:
 
 def margins_of(loops: LoopStack) -> Margins:
     """Give every margin of a one-row stack; see `margins`."""
-    s = sweep(loops, **_FINE)
+    s = sweep(loops, per_decade=_FINE[0], floor=_FINE[1])
     gains, phases = gain_crossings(s), phase_crossings(s)
     listed = _list(gains, phases)
     if unstable_roots(s)[0] > 0.5:
@@ -119,7 +119,7 @@ def margin_table(loops: LoopStack, *, sensitivity: bool = True) -> MarginTable:
     -------
     MarginTable
     """
-    s = sweep(loops, **_COARSE)
+    s = sweep(loops, per_decade=_COARSE[0], floor=_COARSE[1])
     stable = unstable_roots(s) < 0.5
     gains, phases = gain_crossings(s), phase_crossings(s)
     pm = np.full(len(loops), np.inf)

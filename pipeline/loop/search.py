@@ -46,7 +46,8 @@ def roots(f: Function, lo: Reals, hi: Reals, *, steps: int = 60) -> Reals:
     c, fc = a.copy(), fa.copy()
     best = np.where(np.abs(fa) < np.abs(fb), a, b)
     t = np.full(lo.size, 0.5)
-    alive = which
+    # An end that is itself a root has no sign to keep.
+    alive = which[(fa != 0.0) & (fb != 0.0)]
     for _ in range(steps):
         if alive.size == 0:
             break

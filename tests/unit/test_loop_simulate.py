@@ -89,7 +89,7 @@ CASES = [
 @pytest.mark.parametrize(("model", "controller", "horizon"), CASES)
 @pytest.mark.parametrize("load", [False, True])
 def test_prediction_agrees_with_runge_kutta(model, controller, horizon, load):
-    t, pv, co = simulate(model, controller, horizon=horizon, n=int(horizon * 200), load=load)
+    t, pv, _ = simulate(model, controller, horizon=horizon, n=int(horizon * 200), load=load)
     p = predict(model, controller)
     ours = p.load if load else p.setpoint
     keep = t <= min(ours.t[-1], horizon)
