@@ -46,8 +46,8 @@ def roots(f: Function, lo: Reals, hi: Reals, *, steps: int = 60) -> Reals:
     c, fc = a.copy(), fa.copy()
     best = np.where(np.abs(fa) < np.abs(fb), a, b)
     t = np.full(lo.size, 0.5)
-    # An end that is itself a root has no sign to keep.
-    alive = which[(fa != 0.0) & (fb != 0.0)]
+    # An end that is a root to rounding leaves no change of sign: that end is the answer.
+    alive = which[np.sign(fa) * np.sign(fb) < 0.0]
     for _ in range(steps):
         if alive.size == 0:
             break
