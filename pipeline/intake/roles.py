@@ -149,7 +149,7 @@ EVIDENCE: tuple[Evidence, ...] = (
     Evidence(role="co", points=1.0, test=_unit_is(("share",))),
     Evidence(role="co", points=0.5, test=_unit_is(("electric",))),
     Evidence(role="co", points=2.0, test=_steps_and_holds),
-    Evidence(role="pv", points=1.0, test=_many_values),
+    Evidence(role="pv", points=0.5, test=_many_values),
     # a CO nobody moved is more likely than a PV that never moved
     Evidence(role="co", points=-0.5, test=_constant),
     Evidence(role="pv", points=-1.0, test=_constant),
