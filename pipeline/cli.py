@@ -13,10 +13,12 @@ from typing import TYPE_CHECKING, Annotated, NoReturn
 
 import typer
 
+from pipeline import __version__
 from pipeline.errors import READY, WITHHELD, FirstgainError, UsageError
 
 if TYPE_CHECKING:
     from pipeline.commission import Request
+    from pipeline.loop.types import Kind
     from pipeline.settings import LoopSheet
 
 #: Files that lie beside logs in a folder without being logs.
@@ -59,7 +61,7 @@ class _Wish:
     """What the command line asks of every log."""
 
     loop: Path | None
-    controller: str | None = None
+    controller: Kind | None = None
     pm: float | None = None
     gm: float | None = None
     ms: float | None = None
@@ -90,9 +92,7 @@ class _Outcome:
 
 def _show_version(wanted: bool) -> None:
     if wanted:
-        from importlib.metadata import version
-
-        typer.echo(f"firstgain {version('firstgain')}")
+        typer.echo(f"firstgain {__version__}")
         raise typer.Exit
 
 
@@ -129,10 +129,11 @@ def read(
 
 @app.command()
 def tune(
-    logs: Annotated[list[Path], typer.Argument(metavar="LOG...", help="Log files, or folders of them.")],
+    logs: Annotated[list[Path], typer.Argument(metavar="LOG", help="Log files, or folders of them.")],
     loop: Sheet = None,
     controller: Annotated[
-        ControllerKind | None, typer.Option(case_sensitive=False, help="Controller to find settings for.")
+        ControllerKind | None,
+        typer.Option(case_sensitive=False, metavar="P|I|PI|PD|PID", help="Controller to find settings for."),
     ] = None,
     pm: Annotated[float | None, typer.Option(metavar="DEG", help="Phase margin, at least.")] = None,
     gm: Annotated[float | None, typer.Option(metavar="RATIO", help="Gain margin, at least.")] = None,
@@ -148,7 +149,8 @@ def tune(
     no_report: Annotated[bool, typer.Option("--no-report", help="Write the record only.")] = False,
 ) -> None:
     """Turn bump-test logs into settings: per log a record, a report and a short text."""
-    wish = _Wish(loop=loop, controller=controller, pm=pm, gm=gm, ms=ms, overshoot=overshoot)
+    kind: Kind | None = None if controller is None else controller.value
+    wish = _Wish(loop=loop, controller=kind, pm=pm, gm=gm, ms=ms, overshoot=overshoot)
     try:
         _check(wish)
         paths = _expanded(logs)

@@ -40,11 +40,8 @@ def decimals(half_width: float) -> int:
     int
         Places after the point; negative means rounding to tens, hundreds, and so on.
     """
-    exponent = math.floor(math.log10(half_width))
-    leading = half_width / 10.0**exponent
-    if round(leading, 1) >= 10.0:  # 9.96 would be shown as 10
-        exponent, leading = exponent + 1, 1.0
-    return -exponent + (1 if leading < 3.0 else 0)
+    leading, exponent = f"{half_width:.1e}".split("e")
+    return -int(exponent) + (1 if float(leading) < 3.0 else 0)
 
 
 def plain(value: float | None, *, digits: int = PLAIN_DIGITS, unit: str = "") -> str:

@@ -195,9 +195,8 @@ def overshoot(record: Record, p: PredictionInfo) -> str:
     """Write the predicted overshoot with its 5 to 95 % band."""
     if record.bands is None:
         return numbers.percent(p.overshoot_pct)
-    low, middle, high = record.bands.overshoot_pct
-    half = numbers.half_width(middle, low, high)
-    return f"{numbers.rounded(p.overshoot_pct, half)} % ({numbers.bounds(low, high, half)} %)"
+    low, _, high = record.bands.overshoot_pct
+    return numbers.interval(p.overshoot_pct, low, high, "%")
 
 
 def _first_peak(p: PredictionInfo) -> tuple[Fact, ...]:
