@@ -2,10 +2,11 @@
 
 ::
 
-    text.py    bytes -> text lines            clock.py   the time column -> seconds
-    layout.py  lines -> delimiter, header     names.py   what a header says: unit and role
-    table.py   body  -> columns of numbers    roles.py   evidence -> which column is PV, CO, SP
-    order.py   rows in time order, once each  read.py    the composition, `read_log`
+    text.py      bytes -> text lines            clock.py     the time column -> seconds
+    layout.py    lines -> delimiter, header     names.py     what a header says: unit and role
+    table.py     body  -> columns of numbers    evidence.py  what speaks for a column as PV or CO
+    order.py     rows in time order, once each  roles.py     which column is PV, CO, SP
+    read.py      the composition, `read_log`
 """
 
 from __future__ import annotations

@@ -1,84 +1,34 @@
 """Which column is the PV and which the CO: evidence from names, units and behaviour, added up.
 
-Each row of `EVIDENCE` gives points to one column in one role; `_pair_points` gives points to
-two columns together. The best pair wins, and a tie is a question to the user, not a guess.
+`evidence` gives points to one column in one role; two columns together earn more where one follows
+the other or both carry one number. The best pair wins, and a tie is a question to the user, not a guess.
 """
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import TYPE_CHECKING, Literal
+from typing import TYPE_CHECKING
 
 import numpy as np
 
 from pipeline.errors import LogUnreadable, QuestionForUser
 from pipeline.findings import Caution
+from pipeline.intake.evidence import Signal, followed, observe, points, reason
 from pipeline.intake.names import Named, read_name, words_of
 from pipeline.intake.table import Field
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
-#: Rows looked at to judge behaviour: enough for the shape, few enough for no time.
-_LOOK = 256
 #: Points by which the best reading must lead the next one [1]: less is a question.
 _LEAD = 0.25
 #: Points by which one loop of a log may trail another and still count as one of its loops [1].
 _LOOP_LEAD = 1.0
 #: Points a pair must reach to be believed without a word from the user [1].
 _ENOUGH = 2.0
-#: Time constants tried for "the PV follows the CO", in looked-at rows [1]; the last integrates.
-_LAGS = np.array([0.0, 2.0, 5.0, 12.0, 30.0, 80.0, 1e5])
 #: Points for a PV that a lagged CO explains wholly [1].
 _FOLLOWS = 2.5
-#: Squared correlation above which two columns are one signal in two units [1].
-_SAME_SIGNAL = 0.9999
-#: Number of distinct values at which a column counts as continuous [1].
-_FINE = 30
-
-_KINDS_PV = ("temperature", "pressure", "flow", "length", "speed", "composition", "mechanical")
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Signal:
-    """A column seen as a candidate.
-
-    Attributes
-    ----------
-    field : Field
-    named : Named
-    shape : (m,) ndarray
-        Up to 256 of its values in time order, centred and scaled to a range of 1; zeros if constant.
-    moves : bool
-        It is not constant.
-    levels : int
-        Distinct values among all rows.
-    """
-
-    field: Field
-    named: Named
-    shape: NDArray[np.float64]
-    moves: bool
-    levels: int
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Evidence:
-    """One row of the table: what speaks for or against a column in a role.
-
-    Attributes
-    ----------
-    role : {"pv", "co"}
-    points : float
-        Given in full when the test says 1.
-    test : callable
-        Share of the points, and the clause that says why ("" for nothing to say).
-    """
-
-    role: Literal["pv", "co"]
-    points: float
-    test: Callable[[Signal], tuple[float, str]]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -100,60 +50,6 @@ class Roles:
     pv_reason: str
     co_reason: str
     notes: tuple[Caution, ...]
-
-
-def _name_says(role: Literal["pv", "co"]) -> Callable[[Signal], tuple[float, str]]:
-    def test(signal: Signal) -> tuple[float, str]:
-        said = signal.named
-        if said.role is None:
-            return 0.0, ""
-        if said.role == role:
-            return said.weight, f'name says "{said.word}"'
-        return -0.5 * said.weight, ""
-
-    return test
-
-
-def _unit_is(kinds: Sequence[str], share: float = 1.0) -> Callable[[Signal], tuple[float, str]]:
-    def test(signal: Signal) -> tuple[float, str]:
-        return (share, f"unit {signal.field.unit}") if signal.named.kind in kinds else (0.0, "")
-
-    return test
-
-
-def _steps_and_holds(signal: Signal) -> tuple[float, str]:
-    """Few large jumps make up all its travel, and one jump is a good part of its range."""
-    if not signal.moves or signal.shape.size < 4:
-        return 0.0, ""
-    jumps = np.sort(np.abs(np.diff(signal.shape)))[::-1]
-    travel = float(jumps.sum())
-    few = max(1, jumps.size // 20)
-    share = float(jumps[:few].sum()) / travel if travel > 0 else 0.0
-    size = min(1.0, float(jumps[0]) / 0.25)
-    score = share * size
-    return score, "steps and holds" if score > 0.7 else ""
-
-
-def _many_values(signal: Signal) -> tuple[float, str]:
-    return min(1.0, signal.levels / _FINE), ""
-
-
-def _constant(signal: Signal) -> tuple[float, str]:
-    return (0.0, "") if signal.moves else (1.0, "")
-
-
-EVIDENCE: tuple[Evidence, ...] = (
-    Evidence(role="pv", points=1.0, test=_name_says("pv")),
-    Evidence(role="co", points=1.0, test=_name_says("co")),
-    Evidence(role="pv", points=1.0, test=_unit_is(_KINDS_PV)),
-    Evidence(role="co", points=1.0, test=_unit_is(("share",))),
-    Evidence(role="co", points=0.5, test=_unit_is(("electric",))),
-    Evidence(role="co", points=2.0, test=_steps_and_holds),
-    Evidence(role="pv", points=0.5, test=_many_values),
-    # a CO nobody moved is more likely than a PV that never moved
-    Evidence(role="co", points=-0.5, test=_constant),
-    Evidence(role="pv", points=-1.0, test=_constant),
-)
 
 
 def assign_roles(
@@ -196,7 +92,7 @@ def assign_roles(
     usable = [
         f for f in fields if f.index not in spoken_for and not f.empty and _may_be_signal(f, names[f.index])
     ]
-    signals = {f.index: _signal(f, rows, names[f.index]) for f in (*usable, *(g for g in (pv, co) if g))}
+    signals = {f.index: observe(f, rows, names[f.index]) for f in (*usable, *(g for g in (pv, co) if g))}
     for_pv = [signals[pv.index]] if pv else [s for s in signals.values() if s.field is not co]
     for_co = [signals[co.index]] if co else [s for s in signals.values() if s.field is not pv]
     if len(signals) < 2:
@@ -216,8 +112,8 @@ def assign_roles(
         co=u.field,
         sp=sp or _set_point(fields, names, y),
         mode=mode,
-        pv_reason="named in the loop sheet" if pv else _reason("pv", y, best.follows),
-        co_reason="named in the loop sheet" if co else _reason("co", u, 0.0),
+        pv_reason="named in the loop sheet" if pv else reason("pv", y, best.follows),
+        co_reason="named in the loop sheet" if co else reason("co", u, 0.0),
         notes=tuple(notes),
     )
 
@@ -236,41 +132,6 @@ def _may_be_signal(field: Field, named: Named) -> bool:
     return field.values is not None or (named.role in ("pv", "co") and named.weight >= 3.0)
 
 
-def _signal(field: Field, rows: NDArray[np.intp], named: Named) -> Signal:
-    if field.values is None:
-        return Signal(field=field, named=named, shape=np.zeros(0), moves=False, levels=0)
-    values = field.values[rows]
-    known = np.isfinite(values)
-    if not np.any(known):
-        return Signal(field=field, named=named, shape=np.zeros(0), moves=False, levels=0)
-    distinct = np.unique(values[known])
-    low, high = float(distinct[0]), float(distinct[-1])
-    looked = np.linspace(0, values.size - 1, min(values.size, _LOOK)).astype(np.intp)
-    last = np.maximum.accumulate(np.where(known, np.arange(values.size), int(np.argmax(known))))
-    shape = values[last][looked]
-    shape = (shape - low) / (high - low) if high > low else np.zeros(looked.size)
-    return Signal(
-        field=field, named=named, shape=shape - shape.mean(), moves=high > low, levels=int(distinct.size)
-    )
-
-
-def _points(role: str, signal: Signal) -> float:
-    return sum(e.points * e.test(signal)[0] for e in EVIDENCE if e.role == role)
-
-
-def _reason(role: str, signal: Signal, follows: float) -> str:
-    clauses = [
-        clause
-        for e in EVIDENCE
-        if e.role == role
-        for share, clause in [e.test(signal)]
-        if share > 0 and clause
-    ]
-    if follows > 0.5:
-        clauses.append("follows the CO")
-    return ", ".join(clauses) or "the best of what is left"
-
-
 @dataclass(frozen=True, slots=True, kw_only=True)
 class _Pair:
     pv: Signal
@@ -282,9 +143,9 @@ class _Pair:
 def _choose(
     for_pv: Sequence[Signal], for_co: Sequence[Signal], *, asked_pv: bool, asked_co: bool, file: str
 ) -> tuple[_Pair, list[Caution]]:
-    follows, same = _followed(for_pv, for_co)
-    pv_points = [_points("pv", s) for s in for_pv]
-    co_points = [_points("co", s) for s in for_co]
+    follows, same = followed(for_pv, for_co)
+    pv_points = [points("pv", s) for s in for_pv]
+    co_points = [points("co", s) for s in for_co]
     numbers = {s.named.number for s in (*for_pv, *for_co)}
     pairs = []
     for i, y in enumerate(for_pv):
@@ -319,12 +180,12 @@ def _choose(
                 remedy=f"Say which in the loop sheet: [columns] {key} = {_quoted(chosen, other)} or {key} = "
                 f"{_quoted(other, chosen)}.",
             )
-        reason = _reason(key, getattr(best, key), best.follows if key == "pv" else 0.0)
+        why = reason(key, getattr(best, key), best.follows if key == "pv" else 0.0)
         notes.append(
             Caution(
                 code=f"{key}-column",
                 level="note",
-                text=f'{key.upper()} is "{chosen.name}" ({reason}); if not, set [columns] {key}.',
+                text=f'{key.upper()} is "{chosen.name}" ({why}); if not, set [columns] {key}.',
             )
         )
     return best, notes
@@ -358,44 +219,6 @@ def _first_loop(pairs: list[_Pair]) -> tuple[list[_Pair], Caution | None]:
 def _quoted(field: Field, other: Field | None = None) -> str:
     plain = field.name.startswith("column ") or (other is not None and other.name == field.name)
     return str(field.index) if plain else f'"{field.name}"'
-
-
-def _followed(
-    for_pv: Sequence[Signal], for_co: Sequence[Signal]
-) -> tuple[NDArray[np.float64], NDArray[np.bool_]]:
-    """Squared correlation of each PV with each CO behind the best of a few lags, trend removed.
-
-    Returns
-    -------
-    follows : (p, c) ndarray
-    same : (p, c) bool ndarray
-        The two are one signal up to scale.
-    """
-    size = max((s.shape.size for s in (*for_pv, *for_co)), default=0)
-    follows = np.zeros((len(for_pv), len(for_co)))
-    if size < 8:
-        return follows, np.zeros(follows.shape, dtype=bool)
-    empty = np.zeros(size)
-    y = np.array([s.shape if s.shape.size == size else empty for s in for_pv])
-    u = np.array([s.shape if s.shape.size == size else empty for s in for_co])
-    keep = np.exp(-1.0 / np.maximum(_LAGS, 1e-3))[:, None]
-    x = np.empty((size, _LAGS.size, len(for_co)))
-    state = np.repeat(u[None, :, 0], _LAGS.size, axis=0) * (_LAGS[:, None] < 1e4)
-    for k in range(size):
-        state = keep * state + (1.0 - keep) * u[:, k]
-        x[k] = state
-    basis, _ = np.linalg.qr(np.column_stack([np.ones(size), np.linspace(-1, 1, size)]))
-    flat = x.reshape(size, -1)
-    flat = flat - basis @ (basis.T @ flat)
-    bare = y.T - basis @ (basis.T @ y.T)
-    top = (bare.T @ flat) ** 2
-    bottom = np.outer((bare**2).sum(axis=0), (flat**2).sum(axis=0))
-    # columns scaled to a range of 1: less energy than this is rounding, not movement
-    square = np.where(bottom > 1e-18, top / np.maximum(bottom, 1e-18), 0.0).reshape(
-        len(for_pv), _LAGS.size, -1
-    )
-    follows = np.clip(square.max(axis=1), 0.0, 1.0)
-    return follows, square[:, 0, :] > _SAME_SIGNAL
 
 
 def _refuse_same(pv: Field, co: Field, rows: NDArray[np.intp], file: str) -> None:
