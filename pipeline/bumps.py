@@ -24,6 +24,11 @@ _LEVEL_ROWS = 9
 #: A move of a noisy output stands this far above its chatter, and above the wandering of both levels [1].
 _OVER_CHATTER = 8.0
 _OVER_WANDERING = 4.0
+#: Both levels beside a move stay within this share of it (5th to 95th percentile) [1]: a level that
+#: wanders by more is a controller's work.
+_HELD_SHARE = 0.5
+#: Share of a move from which a row of a noisy output has left its old level [1].
+_OFF_SHARE = 0.25
 #: A move smaller than this share of the largest one is a nudge and not a bump of its own [1].
 _NUDGE = 0.05
 #: Moves this many rows apart, or closer, are one staged move.
@@ -86,7 +91,8 @@ def find_moves(log: Log) -> tuple[Move, ...]:
         In the order of the log; none where the output only chatters or never settles.
     """
     change = np.diff(log.co)
-    changed = np.flatnonzero(change)
+    # what is moved on the last row leaves no row to show an answer
+    changed = np.flatnonzero(change[:-1])
     if changed.size == 0:
         return ()
     if changed.size <= _NOISY_SHARE * change.size:
@@ -181,26 +187,38 @@ def _moves_above_chatter(log: Log, sizes: NDArray[np.float64]) -> list[Move]:
     for group in np.split(candidates, np.flatnonzero(np.diff(candidates) > rows) + 1):
         if group.size:
             best = int(group[np.argmax(np.abs(jump[group]))])
-            row = best + rows
-            near = np.diff(log.co[row - 2 : row + 2])
-            row += int(np.argmax(np.abs(near))) - 1
+            row = _first_off(log.co, best, float(level[best]), float(level[best + rows]))
             moves.append(
                 Move(at_s=float(log.t[row]), before=float(level[best]), after=float(level[best + rows]))
             )
-    return moves if _holds_between(log, moves) else []
+    return _held_on_both_sides(log, moves)
 
 
-def _holds_between(log: Log, moves: list[Move]) -> bool:
-    """Tell moves that are held from the turns of an output that is always on its way."""
-    if not moves:
-        return False
+def _first_off(co: NDArray[np.float64], start: int, before: float, after: float) -> int:
+    """Find the first row of a move: back from half way to where the old level was last held."""
+    way = (co[start : start + 2 * _LEVEL_ROWS] - before) / (after - before)
+    row = int(np.argmax(way > 0.5))
+    while row > 1 and way[row - 1] > _OFF_SHARE:
+        row -= 1
+    return start + row
+
+
+def _held_on_both_sides(log: Log, moves: list[Move]) -> list[Move]:
+    """Keep the moves between two held levels: an output that is always on its way holds none."""
     edges = [float(log.t[0]), *(m.at_s for m in moves), np.inf]
     spans = []
     for start, end in pairwise(edges):
         held = log.co[(log.t >= start) & (log.t < end)]
         spans.append(float(np.ptp(np.percentile(held, [5.0, 95.0]))) if held.size else 0.0)
-    typical_move = float(np.median([abs(m.after - m.before) for m in moves]))
-    return float(np.median(spans)) < typical_move
+    # over the whole log the levels must stand out too: the turns of a swinging output do not
+    typical_move = float(np.median([abs(m.after - m.before) for m in moves])) if moves else 0.0
+    if float(np.median(spans)) >= typical_move:
+        return []
+    return [
+        m
+        for m, before, after in zip(moves, spans[:-1], spans[1:], strict=True)
+        if max(before, after) < _HELD_SHARE * abs(m.after - m.before)
+    ]
 
 
 def _typical_wandering(level: NDArray[np.float64]) -> float:

@@ -269,9 +269,9 @@ def _busy(log: Log) -> float:
 def _closed_loop(facts: Facts) -> _Found:
     """A set point that moves, with an output that is always at work, is a controller in automatic."""
     log = facts.log
-    if log.automatic is not None and facts.bumps and not any(b.used for b in facts.bumps):
+    if log.automatic is not None and not any(b.used for b in facts.bumps):
         share = float(np.mean(log.automatic))
-        if share > 0.0:
+        if share > 0.5 or any("automatic" in b.reason for b in facts.bumps):
             return (
                 "stop",
                 share,
