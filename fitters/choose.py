@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from fitters.between import GainsByMove, gains_by_move
 from fitters.estimate import Screened, as_screened, screen, settle
 from fitters.fit import Candidate, Choice
 from fitters.intervals import to_fit
@@ -23,6 +24,18 @@ if TYPE_CHECKING:
 
 #: A drift within this many standard errors of none is left out [1].
 _DRIFT_SURE = 2.0
+#: What was left of an earlier move must improve twice the log likelihood by this much: twice
+#: its cost in parameters for a few hundred rows, since it is looked for unasked.
+_SETTLING_GAIN = 25.0
+#: A lag shorter than this share of the log interval cannot be told from none [1].
+_SHORTEST_LAG = 0.2
+#: Ringing needs at least this many rows a period to be seen for what it is.
+_ROWS_A_PERIOD = 5.0
+#: ... in a baseline of at least so many rows that fits this many times worse than the rest [1].
+_BASELINE_ROWS = 5
+_BASELINE_WORSE = 2.0
+#: ... and over which the PV goes by at least this share of its whole range [1].
+_BASELINE_MOVED = 0.05
 #: A structure's leading gain within this many standard errors of none takes it out of the running [1].
 _GAIN_SURE = 2.0
 #: Candidates with less weight than this are listed but not refined further [1].
@@ -57,16 +70,22 @@ def choose(data: BumpData) -> Choice:
     """
     if np.all(data.co_values == data.co_values[0]):
         raise ValueError("The CO never moves in this part of the log.")
-    used = np.ones(data.t.size, dtype=bool)
-    screened = _screen_all(data, used)
-    closest = settle(Problem(data, used, drift=True), screened[0], several=False)
-    apart = outliers(closest.residual, _ARITHMETIC * float(np.ptp(data.pv)))
-    if np.any(apart):
-        used = ~apart
-        screened = _screen_all(data, used)
-    estimates = _settle_contenders(data, used, screened)
+    problem = Problem(data, np.ones(data.t.size, dtype=bool), drift=True, settling=False)
+    problem, screened, apart = _prepared(problem)
+    moves = gains_by_move(problem, as_screened(problem, _simplest(screened)))
+    if moves.differ:
+        data = moves.data
+        problem = Problem(data, problem.used, drift=True, settling=problem.settling)
+        screened = _screen_all(problem)
+        again = gains_by_move(problem, as_screened(problem, _simplest(screened)))
+        if again.differ:  # once more, now that lags and dead time are nearly right
+            data = again.data
+            problem = Problem(data, problem.used, drift=True, settling=problem.settling)
+            screened = _screen_all(problem)
+    used = problem.used
+    estimates = _settle_contenders(problem, screened)
     noise = _common_noise(estimates, data, used)
-    sure = [e for e in estimates if _leading_gain_sure(e, data, used, noise)]
+    sure = [e for e in estimates if _told_by_the_log(e, data) and _leading_gain_sure(e, data, used, noise)]
     ranked = sorted(sure or estimates, key=lambda e: _criterion(e, data, used, noise))
     scores = np.array([_criterion(e, data, used, noise) for e in ranked])
     weights = np.exp(-0.5 * (scores - scores[0]))
@@ -77,26 +96,68 @@ def choose(data: BumpData) -> Choice:
         settled, own = estimate, noise
         if weight >= _WEIGHT_THAT_COUNTS:
             if not drift_kept and estimate.structure.integrators == 0:
-                settled = _without_drift(estimate, data, used)
+                settled = _without_drift(estimate, problem)
             own = colour(settled.residual[used], data.t[used], settled.jacobian)
         fit = to_fit(settled, data, used, own, float(score))
         candidates.append(Candidate(fit=fit, score=float(score - scores[0]), weight=float(weight)))
     best = candidates[0].fit
-    best = replace(best, notes=(*best.notes, *_notes(apart, drift_kept)))
+    best = replace(best, notes=(*best.notes, *_notes(apart, drift_kept, problem.settling, moves)))
     candidates[0] = replace(candidates[0], fit=best)
     return Choice(best=best, candidates=tuple(candidates), reason=_reason(candidates))
 
 
-def _screen_all(data: BumpData, used: NDArray[np.bool_]) -> list[Screened]:
+def _prepared(problem: Problem) -> tuple[Problem, list[Screened], NDArray[np.bool_]]:
+    """Screen all structures, having dealt with an unsettled start and with outliers on the way."""
+    screened = _screen_all(problem)
+    closest = as_screened(problem, screened[0])
+    if _still_settling(problem, screened, closest):
+        problem = Problem(problem.data, problem.used, drift=True, settling=True)
+        screened = _screen_all(problem)
+        closest = as_screened(problem, screened[0])
+    apart = outliers(closest.residual, _ARITHMETIC * float(np.ptp(problem.data.pv)))
+    if np.any(apart):
+        problem = Problem(problem.data, ~apart, drift=True, settling=problem.settling)
+        screened = _screen_all(problem)
+    return problem, screened, apart
+
+
+def _simplest(screened: list[Screened]) -> Screened:
+    """Give the closest of the structures with one gain and one searched number at most."""
+    return next(s for s in screened if s.structure.gains == 1 and s.structure.searched <= 1)
+
+
+def _screen_all(problem: Problem) -> list[Screened]:
     """Look at every structure quickly, closest to the log first."""
-    problem = Problem(data, used, drift=True)
     return sorted((screen(problem, structure) for structure in all_structures()), key=lambda s: s.cost)
 
 
-def _settle_contenders(data: BumpData, used: NDArray[np.bool_], screened: list[Screened]) -> list[Estimate]:
+def _still_settling(problem: Problem, screened: list[Screened], closest: Estimate) -> bool:
+    """Tell whether the record began before an earlier move had died away.
+
+    Its baseline must fit clearly worse than the rest, and much better with the leftover fitted.
+    """
+    before = problem.t < problem.held.at[0]
+    residual = closest.residual[problem.used]
+    if np.count_nonzero(before) < _BASELINE_ROWS or np.count_nonzero(~before) < _BASELINE_ROWS:
+        return False
+    if np.mean(residual[before] ** 2) < _BASELINE_WORSE**2 * np.mean(residual[~before] ** 2):
+        return False
+    baseline = problem.data.pv[problem.used][before]
+    third = max(baseline.size // 3, 1)
+    moved = abs(float(np.median(baseline[-third:]) - np.median(baseline[:third])))
+    if moved < _BASELINE_MOVED * float(np.ptp(problem.data.pv)):
+        return False
+    settling = Problem(problem.data, problem.used, drift=problem.drift, settling=True)
+    tried = {screened[0].structure.name: screened[0].structure, "first order": structure_named("first order")}
+    cost = min(screen(settling, structure).cost for structure in tried.values())
+    rows = problem.pv.size
+    floor = rows * _ARITHMETIC**2
+    return bool(rows * np.log(max(screened[0].cost, floor) / max(cost, floor)) > _SETTLING_GAIN)
+
+
+def _settle_contenders(problem: Problem, screened: list[Screened]) -> list[Estimate]:
     """Settle the structures whose criterion, seen roughly, leaves them a chance; the others as they are."""
-    problem = Problem(data, used, drift=True)
-    count = int(np.count_nonzero(used))
+    count = problem.pv.size
     rough = [
         count * np.log(max(s.cost, 1e-18 * count)) + s.structure.parameter_count * np.log(count)
         for s in screened
@@ -109,8 +170,8 @@ def _settle_contenders(data: BumpData, used: NDArray[np.bool_], screened: list[S
     return out
 
 
-def _without_drift(estimate: Estimate, data: BumpData, used: NDArray[np.bool_]) -> Estimate:
-    problem = Problem(data, used, drift=False)
+def _without_drift(estimate: Estimate, problem: Problem) -> Estimate:
+    problem = Problem(problem.data, problem.used, drift=False, settling=problem.settling)
     start = (estimate.search, estimate.dead_time)
     begun = Screened(structure=estimate.structure, end=start, cost=estimate.cost, starts=(start,))
     settled = settle(problem, begun, several=False)
@@ -137,10 +198,20 @@ def _criterion(estimate: Estimate, data: BumpData, used: NDArray[np.bool_], nois
     )
 
 
+def _told_by_the_log(estimate: Estimate, data: BumpData) -> bool:
+    """Tell whether the structure is what it stands for, and the rows dense enough to show it."""
+    if not estimate.structure.admits(estimate.gains):
+        return False
+    poles = estimate.structure.model(estimate.search, estimate.gains, 0.0).poles
+    fast = float(np.max(np.abs(poles), initial=0.0)) * _SHORTEST_LAG * data.interval > 1.0
+    rings = float(np.max(np.abs(poles.imag), initial=0.0)) * _ROWS_A_PERIOD * data.interval > 2.0 * np.pi
+    return not (fast or rings)
+
+
 def _leading_gain_sure(estimate: Estimate, data: BumpData, used: NDArray[np.bool_], noise: Noise) -> bool:
     """Tell whether the gain that gives the structure its name can be told from none.
 
-    An integrator with a zero, say, whose integrating gain may be zero is a first order in disguise.
+    An integrator with inverse response, say, whose integrating gain may be zero is a lag in disguise.
     """
     place = estimate.structure.searched + 1
     variance = covariance(estimate.jacobian, data.t[used], noise)[place, place]
@@ -157,11 +228,26 @@ def _drift_matters(estimate: Estimate, data: BumpData, used: NDArray[np.bool_]) 
     )
 
 
-def _notes(apart: NDArray[np.bool_], drift_kept: bool) -> tuple[tuple[str, str], ...]:
+def _notes(
+    apart: NDArray[np.bool_], drift_kept: bool, settling: bool, moves: GainsByMove
+) -> tuple[tuple[str, str], ...]:
     notes = []
     count = int(np.count_nonzero(apart))
     if count:
         notes.append(("outliers", f"{count} rows stand apart from their neighbours and were set aside."))
+    if moves.differ:
+        shares = ", ".join(f"{100 * share:.0f} %" for share in moves.scale)
+        notes.append(
+            (
+                "gain-differs-between-moves",
+                f"The moves were not answered alike: {shares} of the largest gain, in their order. "
+                "The largest gain is used, which is the safe one; expect slower control elsewhere.",
+            )
+        )
+    if settling:
+        notes.append(
+            ("still-settling", "The PV was still settling when the record began; that was fitted with it.")
+        )
     if drift_kept:
         notes.append(("drift", "A straight-line drift was found and taken out."))
     return tuple(notes)
@@ -199,7 +285,7 @@ def fit_named(data: BumpData, name: str) -> Fit:
         If there is no such structure.
     """
     used = np.ones(data.t.size, dtype=bool)
-    problem = Problem(data, used, drift=True)
+    problem = Problem(data, used, drift=True, settling=False)
     estimate = settle(problem, screen(problem, structure_named(name)))
     noise = colour(estimate.residual, data.t, estimate.jacobian)
     return to_fit(estimate, data, used, noise, _criterion(estimate, data, used, noise))

@@ -68,8 +68,8 @@ class Estimate:
     residual : (n,) ndarray
         PV minus fit over all rows, set-aside ones included [PV unit].
     jacobian : (m, p) ndarray
-        Derivatives of the fit at the used rows by searched numbers, dead time, gains,
-        offset and, if fitted, drift, in this order.
+        Derivatives of the fit at the used rows by searched numbers, dead time, gains, what
+        was left of an earlier move (if fitted), offset and drift (if fitted), in this order.
     cost : float
         Sum of squares over the used rows [PV unit squared].
     converged : bool
@@ -145,7 +145,7 @@ def screen(problem: Problem, structure: Structure) -> Screened:
         return Screened(structure=structure, end=(np.empty(0), dead_time), cost=cost, starts=starts)
     many = structure.searched + structure.gains > _SIMPLE
     ends = [_approach(problem, structure, start) for start in (starts if many else starts[:1])]
-    end = min(ends, key=lambda e: e.cost)
+    end = min(ends, key=lambda e: _rank(problem, structure, e))
     return Screened(structure=structure, end=(end.search, end.dead_time), cost=end.cost, starts=starts)
 
 
@@ -171,10 +171,10 @@ def settle(problem: Problem, screened: Screened, *, several: bool = True) -> Est
     if several:
         for start in screened.starts[1:]:
             rough = _approach(problem, structure, start)
-            if rough.cost < ends[0].cost * (1.0 - _SAME_COST):
+            if _rank(problem, structure, rough) < (False, ends[0].cost * (1.0 - _SAME_COST)):
                 rough = _refine(problem, structure, (rough.search, rough.dead_time))
             ends.append(rough)
-        ends.sort(key=lambda end: end.cost)
+        ends.sort(key=lambda end: _rank(problem, structure, end))
     best = ends[0]
     if best.dead_time < 0.0:
         held = _refine(problem, structure, (best.search, 0.0), hold=True)
@@ -196,6 +196,12 @@ def as_screened(problem: Problem, screened: Screened) -> Estimate:
     """
     end = _End(screened.end[0], screened.end[1], screened.cost, True)
     return _collect(problem, screened.structure, end, [end], hold=end.dead_time < 0.0)
+
+
+def _rank(problem: Problem, structure: Structure, end: _End) -> tuple[bool, float]:
+    """Order ends by cost, those that are not what the structure stands for last."""
+    factors = problem.factors(structure, end.search, max(end.dead_time, 0.0))
+    return not structure.admits(factors[: structure.gains]), end.cost
 
 
 def _approach(problem: Problem, structure: Structure, start: Start) -> _End:
@@ -271,18 +277,19 @@ def _collect(problem: Problem, structure: Structure, end: _End, ends: list[_End]
     scale[scale == 0.0] = 1.0
     pv = problem.data.pv[problem.used] - problem.level
     factors = np.linalg.lstsq(linear / scale, pv, rcond=None)[0] / scale
-    gains, levels = factors[: structure.gains], factors[structure.gains :]
+    shaped = response.value.shape[0]
+    weights, levels = factors[:shaped], factors[shaped:]
     everywhere = respond(structure, problem.held_all, end.search, dead_time)
-    residual = problem.data.pv - problem.level - gains @ everywhere.value - problem.levels_all @ levels
-    by_search = np.einsum("r,krn->kn", gains, response.by_search)
-    by_dead_time = gains @ response.by_dead_time
+    residual = problem.data.pv - problem.level - weights @ everywhere.value - problem.levels_all @ levels
+    by_search = np.einsum("r,krn->kn", weights, response.by_search)
+    by_dead_time = weights @ response.by_dead_time
     used_residual = residual[problem.used]
     agreeing, rivals = _agreement(ends, problem)
     return Estimate(
         structure=structure,
         search=end.search,
         dead_time=dead_time,
-        gains=gains,
+        gains=weights[: structure.gains],
         offset=float(levels[0] + problem.level),
         drift=float(levels[1]) if problem.drift else 0.0,
         drift_fitted=problem.drift,

@@ -36,6 +36,10 @@ _SHARES = np.array([0.15, 0.5, 1.0])
 #: Slow noise must improve twice the log likelihood by this much: little, since missing
 #: it costs more than imagining it.
 _COLOUR_GAIN = 1.0
+#: Directions this weak against the strongest are not told by the rows [1].
+_BLIND = 1e-10
+#: What keeps a residual that lies in the fit's own span from a division by nothing [1].
+_RIDGE = 1e-13
 #: Rows the colour is estimated from; more add nothing but time.
 _COLOUR_ROWS = 1500
 
@@ -82,20 +86,19 @@ def colour(residual: NDArray[np.float64], t: NDArray[np.float64], jacobian: NDAr
     if count <= jacobian.shape[1] + 2 or not np.any(residual):
         return Noise(sd=0.0, correlation=0.0, slow_share=0.0, effective_samples=float(count))
     stride = max(1, count // _COLOUR_ROWS)
-    basis = np.linalg.qr(jacobian)[0][::stride]
-    columns = np.column_stack([basis, residual[::stride]])
+    size = float(np.linalg.norm(residual[::stride]))
+    columns = np.column_stack([_spanned(jacobian)[::stride], residual[::stride] / size])
     times = t[::stride]
     white, variance = _white_deviance(columns)
     found = _search(columns, times)
     if found is None or white - found[0] < _COLOUR_GAIN:
-        return Noise(
-            sd=float(np.sqrt(variance)), correlation=0.0, slow_share=0.0, effective_samples=float(count)
-        )
+        sd = size * float(np.sqrt(variance))
+        return Noise(sd=sd, correlation=0.0, slow_share=0.0, effective_samples=float(count))
     _, correlation, share, variance = found
     ones = np.ones((count, 1))
     spread = share * float(np.sum(_half_coloured(ones, t, correlation) ** 2)) + (1.0 - share) * count
     return Noise(
-        sd=float(np.sqrt(variance)),
+        sd=size * float(np.sqrt(variance)),
         correlation=correlation,
         slow_share=share,
         effective_samples=float(count**2 / spread),
@@ -122,7 +125,7 @@ def covariance(jacobian: NDArray[np.float64], t: NDArray[np.float64], noise: Noi
     scale = np.linalg.norm(jacobian, axis=0)
     scale[scale == 0.0] = 1.0
     u, s, vt = np.linalg.svd(jacobian / scale, full_matrices=False)
-    blind = s < 1e-10 * s[0]
+    blind = s < _BLIND * s[0]
     inverse = vt.T / np.where(blind, np.inf, s)
     middle = np.eye(s.size)
     if noise.slow_share > 0.0:
@@ -185,6 +188,13 @@ def outliers(residual: NDArray[np.float64], resolution: float) -> NDArray[np.boo
     return np.asarray(found)
 
 
+def _spanned(jacobian: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Give an orthonormal basis of what the columns span, copies and empty ones left out."""
+    scale = np.linalg.norm(jacobian, axis=0)
+    u, s, _ = np.linalg.svd(jacobian / np.where(scale > 0.0, scale, 1.0), full_matrices=False)
+    return np.asarray(u[:, s > _BLIND * s[0]])
+
+
 def _search(columns: NDArray[np.float64], t: NDArray[np.float64]) -> tuple[float, float, float, float] | None:
     """Find deviance, correlation time, slow share and variance at the likelihood's top."""
     low = np.log(_SHORTEST_CORRELATION * float(np.median(np.diff(t))))
@@ -233,7 +243,8 @@ def _deviance(
 def _from_gram(gram: NDArray[np.float64], log_det: float, count: int) -> tuple[float, float]:
     """Finish the likelihood from X' R**-1 X with the residual as its last column."""
     p = gram.shape[0] - 1
-    root = np.linalg.cholesky(gram + 1e-300 * np.eye(p + 1))
+    scale = np.sqrt(np.diag(gram))
+    root = scale[:, None] * np.linalg.cholesky(gram / np.outer(scale, scale) + _RIDGE * np.eye(p + 1))
     variance = float(root[p, p] ** 2) / (count - p)
     deviance = (count - p) * np.log(variance) + log_det + 2.0 * float(np.sum(np.log(np.diag(root)[:p])))
     return float(deviance), variance

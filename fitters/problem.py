@@ -7,6 +7,7 @@ Pereyra 1973, with the simplified derivative of Kaufman 1975).
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -35,6 +36,8 @@ class Problem:
         Rows that count.
     drift : bool
         Fit a straight-line drift besides the level.
+    settling : bool
+        Fit what was left of an earlier move when the record began.
 
     Attributes
     ----------
@@ -48,11 +51,12 @@ class Problem:
         Dead times beyond this leave too few rows to see an answer [s].
     """
 
-    def __init__(self, data: BumpData, used: NDArray[np.bool_], *, drift: bool) -> None:
+    def __init__(self, data: BumpData, used: NDArray[np.bool_], *, drift: bool, settling: bool) -> None:
         self.data = data
         self.used = used
         self.drift = drift
-        self.held_all = HeldInput.from_data(data)
+        self.settling = settling
+        self.held_all = HeldInput.from_data(data, settling=settling)
         self.held = self.held_all.at_rows(used)
         self.t = data.t[used]
         self.levels = _levels(self.t - data.t[0], drift=drift)
@@ -73,17 +77,23 @@ class Problem:
         """
         return np.asarray(rows - (rows @ self._level_basis) @ self._level_basis.T)
 
-    def thinned(self, count: int) -> Problem:
-        """Give the same problem on about `count` evenly chosen rows.
+    def sketched(self, rows: int, moves: int) -> Problem:
+        """Give a smaller problem alike: fewer rows, chatter merged, the first moves only.
 
         Parameters
         ----------
-        count : int
+        rows, moves : int
+            At most about this many.
         """
-        rows = np.flatnonzero(self.used)
+        held, until = self.held.condensed(moves)
+        inside = np.flatnonzero(self.used & (self.data.t < until))
+        if inside.size < rows:
+            inside = np.flatnonzero(self.used)
         kept = np.zeros(self.used.size, dtype=bool)
-        kept[rows[:: max(1, rows.size // count)]] = True
-        return Problem(self.data, kept, drift=self.drift)
+        kept[inside[:: max(1, inside.size // rows)]] = True
+        sketch = Problem(self.data, kept, drift=self.drift, settling=self.settling)
+        sketch.held = replace(held, t=sketch.t)
+        return sketch
 
     def project(
         self, structure: Structure, search: NDArray[np.float64], dead_time: float
@@ -113,6 +123,25 @@ class Problem:
         change = self.without_level(change)
         change -= (change @ basis.T) @ basis
         return residual, -change
+
+    def factors(
+        self, structure: Structure, search: NDArray[np.float64], dead_time: float
+    ) -> NDArray[np.float64]:
+        """Give the linear factors at one point, in spreads of the PV.
+
+        Parameters
+        ----------
+        structure : Structure
+        search : (k,) ndarray
+        dead_time : float
+            [s].
+
+        Returns
+        -------
+        (r,) ndarray
+        """
+        value = respond(structure, self.held, limited(search), dead_time).value
+        return _orthonormal(self.without_level(value), self.pv)[1]
 
     def costs(
         self, structure: Structure, search: NDArray[np.float64], dead_times: NDArray[np.float64]
@@ -160,26 +189,28 @@ def _levels(elapsed: NDArray[np.float64], *, drift: bool) -> NDArray[np.float64]
 def _orthonormal(
     rows: NDArray[np.float64], pv: NDArray[np.float64]
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Make one or two rows orthonormal by hand, faster than a general QR, and solve for the PV.
+    """Make a few rows orthonormal by hand, faster than a general QR, and solve for the PV.
 
     Returns the (r, m) basis, zero rows where a regressor tells nothing new, and the (r,) factors.
     """
+    count = rows.shape[0]
     basis = np.zeros_like(rows)
-    first = rows[0]
-    size = float(np.sqrt(first @ first))
-    if size > 0.0:
-        basis[0] = first / size
-    if rows.shape[0] == 1:
-        return basis, np.array([float(basis[0] @ pv) / size if size > 0.0 else 0.0])
-    shared = float(basis[0] @ rows[1])
-    rest = rows[1] - shared * basis[0]
-    again = float(basis[0] @ rest)  # once more: one pass leaves rounding behind (Kahan's rule)
-    rest -= again * basis[0]
-    shared += again
-    rest_size = float(np.sqrt(rest @ rest))
-    second = 0.0
-    if rest_size > _NOTHING_NEW * max(float(np.sqrt(rows[1] @ rows[1])), 1e-300):
-        basis[1] = rest / rest_size
-        second = float(basis[1] @ pv) / rest_size
-    head = (float(basis[0] @ pv) - shared * second) / size if size > 0.0 else 0.0
-    return basis, np.array([head, second])
+    triangle = np.zeros((count, count))
+    right = np.zeros(count)
+    for i in range(count):
+        rest = rows[i]
+        size = float(np.sqrt(rest @ rest))
+        for _ in range(2 if i else 0):  # twice: one pass leaves rounding behind (Kahan's rule)
+            shared = basis[:i] @ rest
+            rest = rest - shared @ basis[:i]
+            triangle[:i, i] += shared
+        left = float(np.sqrt(rest @ rest))
+        if left > _NOTHING_NEW * size:
+            basis[i] = rest / left
+            triangle[i, i] = left
+            right[i] = basis[i] @ pv
+    factors = np.zeros(count)
+    for i in reversed(range(count)):
+        if triangle[i, i] > 0.0:
+            factors[i] = (right[i] - triangle[i, i + 1 :] @ factors[i + 1 :]) / triangle[i, i]
+    return basis, factors

@@ -8,7 +8,7 @@ cost grows with the rows and not with rows times moves.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -25,6 +25,8 @@ if TYPE_CHECKING:
 _PAIRS_FOR_SUPERPOSITION = 100_000
 #: Up to this many moves superposition is cheaper whatever the number of rows.
 _FEW_MOVES = 8
+#: Changes that add up to less than this share of the CO's range are chatter to a first look [1].
+_CHATTER = 0.1
 #: Steps of the recursion closer than this share of the longest are one and the same.
 _SAME_STEP = 1e-11
 
@@ -41,23 +43,30 @@ class HeldInput:
         Times of the changes [s].
     size : (m,) ndarray
         Change of the CO at each of them [CO unit].
+    settling_from : float or None
+        Where the PV was still on its way when the record began, that time [s]: a last
+        regressor then stands for what came before, of unknown size. None: it was at rest.
     """
 
     t: NDArray[np.float64]
     at: NDArray[np.float64]
     size: NDArray[np.float64]
+    settling_from: float | None = None
 
     @classmethod
-    def from_data(cls, data: BumpData) -> HeldInput:
+    def from_data(cls, data: BumpData, *, settling: bool) -> HeldInput:
         """Take the changes out of a bump's CO; the first value has always been there.
 
         Parameters
         ----------
         data : BumpData
+        settling : bool
+            The PV may still have been on its way at the start.
         """
         size = np.diff(data.co_values)
         moved = size != 0.0
-        return cls(data.t, data.co_times[1:][moved], size[moved])
+        start = float(data.t[0]) if settling else None
+        return cls(data.t, data.co_times[1:][moved], size[moved], start)
 
     def at_rows(self, rows: NDArray[np.bool_] | NDArray[np.intp]) -> HeldInput:
         """Give the same input seen at some of the rows only.
@@ -66,12 +75,41 @@ class HeldInput:
         ----------
         rows : (n,) bool or (k,) int ndarray
         """
-        return HeldInput(self.t[rows], self.at, self.size)
+        return HeldInput(self.t[rows], self.at, self.size, self.settling_from)
+
+    def condensed(self, count: int) -> tuple[HeldInput, float]:
+        """Merge chatter into the moves it adds up to, and keep the first of them.
+
+        Parameters
+        ----------
+        count : int
+            Moves to keep at most.
+
+        Returns
+        -------
+        HeldInput
+        float
+            Time until which the kept moves are all there are [s].
+        """
+        if self.at.size <= count:
+            return self, np.inf
+        smallest = _CHATTER * float(np.ptp(np.cumsum(self.size)))
+        at, size, pending = [], [], 0.0
+        for time, change in zip(self.at.tolist(), self.size.tolist(), strict=True):
+            pending += change
+            if abs(pending) >= smallest:
+                at.append(time)
+                size.append(pending)
+                pending = 0.0
+        until = at[count] if len(at) > count else np.inf
+        return replace(self, at=np.array(at[:count]), size=np.array(size[:count])), until
 
 
 @dataclass(frozen=True, slots=True)
 class Response:
     """Responses per linear factor and their derivatives at n logged times.
+
+    The rows are the structure's own, then one more if the PV was still settling.
 
     Attributes
     ----------
@@ -102,9 +140,16 @@ def respond(structure: Structure, held: HeldInput, search: NDArray[np.float64], 
     Response
         PV per unit of each linear factor.
     """
-    if held.at.size <= _FEW_MOVES or held.at.size * held.t.size <= _PAIRS_FOR_SUPERPOSITION:
-        return _superpose(structure, held, search, dead_time)
-    return _recur(structure, held, search, dead_time)
+    few = held.at.size <= _FEW_MOVES or held.at.size * held.t.size <= _PAIRS_FOR_SUPERPOSITION
+    answer = (_superpose if few else _recur)(structure, held, search, dead_time)
+    if held.settling_from is None:
+        return answer
+    before = structure.shapes(held.t - held.settling_from, search)
+    return Response(
+        value=np.concatenate([answer.value, before.value[:1]]),
+        by_search=np.concatenate([answer.by_search, before.by_search[:, :1]], axis=1),
+        by_dead_time=np.concatenate([answer.by_dead_time, np.zeros((1, held.t.size))]),
+    )
 
 
 def _superpose(

@@ -20,8 +20,8 @@ _DEAD_TIMES = 11
 _GROUPS = 3
 #: More of them for a structure with a zero, which can pass for dead time.
 _MORE_WITH_ZERO = 2
-#: Moves up to which all dead times are tried at once; beyond, one by one by recursion.
-_FEW_MOVES = 12
+#: Moves the grid looks at.
+_COARSE_MOVES = 8
 #: Relative size of what keeps a nearly singular two-by-two system solvable [1].
 _RIDGE = 1e-10
 
@@ -41,15 +41,12 @@ def coarse_starts(problem: Problem, structure: Structure) -> list[Start]:
     list of ((k,) ndarray, float)
         Searched numbers and dead time [s], the most promising first.
     """
-    coarse = problem.thinned(_COARSE_ROWS)
+    coarse = problem.sketched(_COARSE_ROWS, _COARSE_MOVES)
     interval = problem.data.interval
     longest = max(0.8 * problem.longest_dead_time, 2.0 * interval)
     dead_times = np.concatenate([[0.3 * interval], np.geomspace(interval, longest, _DEAD_TIMES - 1)])
     searches = [np.asarray(q, dtype=float) for q in structure.starts(problem.data.span, interval)]
-    if coarse.held.at.size <= _FEW_MOVES:
-        costs = np.array([_costs_at_once(coarse, structure, q, dead_times) for q in searches])
-    else:
-        costs = np.array([coarse.costs(structure, q, dead_times) for q in searches])
+    costs = np.array([_costs_at_once(coarse, structure, q, dead_times) for q in searches])
     winners = np.argmin(costs, axis=0)
     lowest = costs.min(axis=0)
     groups = np.array_split(np.arange(_DEAD_TIMES), _GROUPS + _MORE_WITH_ZERO * (structure.gains - 1))
@@ -65,10 +62,16 @@ def _costs_at_once(
     tau = held.t - held.at[:, None] - dead_times[:, None, None]
     weight = (tau > 0.0) * held.size[:, None]
     value = structure.shapes(np.maximum(tau, 0.0), search).value
-    regressors = problem.without_level(np.einsum("djn,rdjn->drn", weight, value))
+    regressors = np.einsum("djn,rdjn->drn", weight, value)
+    if held.settling_from is not None:
+        before = structure.shapes(held.t - held.settling_from, search).value[:1]
+        regressors = np.concatenate(
+            [regressors, np.broadcast_to(before, (dead_times.size, *before.shape))], axis=1
+        )
+    regressors = problem.without_level(regressors)
     size = np.sqrt(np.einsum("drn,drn->dr", regressors, regressors))
     regressors /= np.maximum(size, 1e-300)[..., None]
     right = regressors @ problem.pv
-    gram = regressors @ regressors.swapaxes(1, 2) + _RIDGE * np.eye(structure.gains)
+    gram = regressors @ regressors.swapaxes(1, 2) + _RIDGE * np.eye(regressors.shape[1])
     factors = np.linalg.solve(gram, right[..., None])[..., 0]
     return np.asarray(problem.pv @ problem.pv - np.einsum("dr,dr->d", factors, right))

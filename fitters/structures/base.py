@@ -128,6 +128,17 @@ class Structure(ABC):
             Dead time [s].
         """
 
+    def admits(self, gains: NDArray[np.float64]) -> bool:
+        """Tell whether these factors are what the structure stands for; others have their own.
+
+        Parameters
+        ----------
+        gains : (r,) ndarray
+            Factors of the shapes, up to a common scale.
+        """
+        del gains
+        return True
+
     @abstractmethod
     def quantities(
         self, search: NDArray[np.float64], gains: NDArray[np.float64], dead_time: float

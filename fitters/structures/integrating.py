@@ -1,4 +1,4 @@
-"""Processes that do not settle: integrator, with lag, and with inverse response or lead."""
+"""Processes that do not settle: integrator, with lag, and with inverse response."""
 
 from __future__ import annotations
 
@@ -78,10 +78,13 @@ class IntegratorWithLag(Structure):
         )
 
 
-class IntegratorWithZero(Structure):
-    """K' (Tz s + 1) exp(-theta s) / (s (T s + 1)); Tz below zero: shrink and swell."""
+class IntegratorWithInverseResponse(Structure):
+    """K' (Tz s + 1) exp(-theta s) / (s (T s + 1)) with Tz below zero: shrink and swell.
 
-    name = "integrator with zero"
+    With Tz above zero it would be a lag with a slow drift of its own, which is not a level.
+    """
+
+    name = "integrator with inverse response"
     searched = 1
     gains = 2
     integrators = 1
@@ -97,6 +100,9 @@ class IntegratorWithZero(Structure):
 
     def starts(self, span: float, interval: float) -> Iterator[tuple[float, ...]]:  # noqa: D102
         yield from IntegratorWithLag().starts(span, interval)
+
+    def admits(self, gains: NDArray[np.float64]) -> bool:  # noqa: D102
+        return bool(gains[0] * gains[1] < 0.0)
 
     def model(  # noqa: D102
         self, search: NDArray[np.float64], gains: NDArray[np.float64], dead_time: float
@@ -119,4 +125,4 @@ class IntegratorWithZero(Structure):
         )
 
 
-STRUCTURES = (Integrator(), IntegratorWithLag(), IntegratorWithZero())
+STRUCTURES = (Integrator(), IntegratorWithLag(), IntegratorWithInverseResponse())

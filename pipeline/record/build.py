@@ -205,5 +205,5 @@ def assemble(
         cautions=parts.caution_infos(cautions),
         next_steps=tuple(next_steps),
         series=shown,
-        **found,  # type: ignore[arg-type]
+        **found,
     )

@@ -1,0 +1,131 @@
+"""Whether every move of the CO was answered with the same gain, and what to do if not.
+
+A valve's curve, a process that changes with its level, or a dead band on reversal give each
+move its own gain. One gain forced on all of them spoils lags and dead time too. So the moves
+are scaled to what they achieved, the largest gain standing for one: the model's gain is then
+the largest seen, which is the safe one to tune for.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from fitters.noise import colour, covariance
+from fitters.response import HeldInput, respond
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+    from fitters.estimate import Estimate
+    from fitters.fit import BumpData
+    from fitters.problem import Problem
+
+#: Moves looked at one by one; more are taken in two groups, up and down.
+_ONE_BY_ONE = 8
+#: Gains differ when the largest and the smallest are this far apart, as a share of their mean [1] ...
+_APART = 0.10
+#: ... by this many standard errors, or explaining what was left over down to this share [1].
+_SURE = 4.0
+_EXPLAINED = 2.0
+#: A drift must explain what unequal gains leave over down to one part in this to be believed beside them [1].
+_NO_DRIFT = 1.5
+#: A move with less than this share of the typical gain, or of the other sign, was not answered at all [1].
+_SEEN = 0.2
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class GainsByMove:
+    """The gain each move showed.
+
+    Attributes
+    ----------
+    at : (g,) ndarray
+        Time of each move, or of the first move of each direction [s].
+    scale : (g,) ndarray
+        Its gain over the largest one [1].
+    differ : bool
+        They differ by more than the log's uncertainty.
+    data : BumpData
+        The same test with the moves scaled to what they achieved.
+    """
+
+    at: NDArray[np.float64]
+    scale: NDArray[np.float64]
+    differ: bool
+    data: BumpData
+
+
+def gains_by_move(problem: Problem, estimate: Estimate) -> GainsByMove:
+    """Give each move a gain of its own, dynamics as estimated.
+
+    Parameters
+    ----------
+    problem : Problem
+    estimate : Estimate
+        Of a structure with one gain.
+
+    Returns
+    -------
+    GainsByMove
+    """
+    held = problem.held
+    group = _groups(held)
+    count = int(group.max()) + 1
+    columns = [
+        respond(estimate.structure, _only(held, group == g), estimate.search, estimate.dead_time).value[0]
+        for g in range(count)
+    ]
+    pv = problem.data.pv[problem.used] - problem.level
+    jacobian, factors, residual = _solve([*columns, problem.levels], pv)
+    level_only = _solve([*columns, problem.levels[:, :1]], pv)
+    if level_only[2] @ level_only[2] < _NO_DRIFT * (residual @ residual):
+        jacobian, factors, residual = level_only  # drift and unequal gains imitate each other
+    cov = covariance(jacobian, problem.t, colour(residual, problem.t, jacobian))[:count, :count]
+    gains = factors[:count]
+    typical = float(np.median(np.abs(gains)))
+    known = (np.abs(gains) > _SEEN * typical) & (np.sign(gains) == np.sign(estimate.gains[0]))
+    scale = np.ones(count)
+    differ = False
+    if count > 1 and np.count_nonzero(known) > 1:
+        largest = float(np.max(np.abs(gains[known])))
+        scale[known] = np.abs(gains[known]) / largest
+        high, low = (
+            int(np.argmax(np.where(known, np.abs(gains), -np.inf))),
+            int(np.argmin(np.where(known, np.abs(gains), np.inf))),
+        )
+        between = float(np.sqrt(max(cov[high, high] + cov[low, low] - 2.0 * cov[high, low], 0.0)))
+        gap = abs(gains[high]) - abs(gains[low])
+        clear = gap > _SURE * between or estimate.cost > _EXPLAINED * float(residual @ residual)
+        differ = bool(gap > _APART * np.mean(np.abs(gains[known])) and clear)
+    first = np.array([float(held.at[group == g][0]) for g in range(count)])
+    return GainsByMove(at=first, scale=scale, differ=differ, data=_scaled(problem.data, held, scale[group]))
+
+
+def _solve(
+    columns: list[NDArray[np.float64]], pv: NDArray[np.float64]
+) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
+    """Give the columns side by side, the factors, and what they leave over."""
+    jacobian = np.column_stack(columns)
+    factors = np.asarray(np.linalg.lstsq(jacobian, pv, rcond=None)[0], dtype=float)
+    return jacobian, factors, pv - jacobian @ factors
+
+
+def _groups(held: HeldInput) -> NDArray[np.intp]:
+    if held.at.size <= _ONE_BY_ONE:
+        return np.arange(held.at.size)
+    _, group = np.unique(np.sign(held.size), return_inverse=True)
+    return np.asarray(group)
+
+
+def _only(held: HeldInput, chosen: NDArray[np.bool_]) -> HeldInput:
+    return replace(held, at=held.at[chosen], size=held.size[chosen], settling_from=None)
+
+
+def _scaled(data: BumpData, held: HeldInput, scale: NDArray[np.float64]) -> BumpData:
+    """Rebuild the CO from its moves, each as large as what it achieved."""
+    values = data.co_values[0] + np.concatenate([[0.0], np.cumsum(held.size * scale)])
+    times = np.concatenate([data.co_times[:1], held.at])
+    return replace(data, co_times=times, co_values=values)
