@@ -14,6 +14,8 @@ from pipeline.findings import Caution, worst_first
 
 __all__ = ["RULES", "Facts", "cautions"]
 
+#: What the fit itself noticed and that restricts the use of the settings.
+_RESTRICTING = frozenset({"gain-differs-between-moves", "dead-time-ambiguous"})
 #: The order is the order of reading within one level.
 RULES: tuple[Callable[[Facts], Caution | None], ...] = (
     process.sign_unknown,
@@ -61,7 +63,8 @@ def cautions(facts: Facts) -> tuple[Caution, ...]:
     found = [*facts.quality.findings, *facts.log.notes]
     found += [caution for rule in RULES if (caution := rule(facts)) is not None]
     if facts.choice is not None:
-        found += [Caution(code=code, level="note", text=text) for code, text in facts.choice.best.notes]
+        for code, text in facts.choice.best.notes:
+            found.append(Caution(code=code, level="care" if code in _RESTRICTING else "note", text=text))
     if facts.tuning is not None:
         found += facts.tuning.remarks
     return worst_first(found)
