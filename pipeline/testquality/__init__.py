@@ -1,4 +1,12 @@
-"""Is the test good enough to take a gain from: one table of checks, each with its limit and source."""
+"""Is the test good enough to take a gain from: one table of checks, each with its limit and source.
+
+::
+
+    facts.py   log and bumps -> noise, and what the PV did after each bump, worked out once
+    rule.py    one row of the table
+    record.py  checks of the record: the columns, the mode, is there a move at all
+    answer.py  checks of the answer: its size, baseline, rows, resolution, ranges, hold
+"""
 
 from __future__ import annotations
 
@@ -8,8 +16,10 @@ from typing import TYPE_CHECKING, Literal
 
 from pipeline.findings import Caution, worst_first
 from pipeline.settings import LoopSheet
+from pipeline.testquality.answer import ANSWER_RULES
 from pipeline.testquality.facts import gather
-from pipeline.testquality.rules import RULES, Rule
+from pipeline.testquality.record import RECORD_RULES
+from pipeline.testquality.rule import Rule
 
 if TYPE_CHECKING:
     from pipeline.bumps import Bump
@@ -18,6 +28,8 @@ if TYPE_CHECKING:
 __all__ = ["RULES", "Quality", "Rule", "Verdict", "judge"]
 
 Verdict = Literal["use", "use with care", "do not use"]
+
+RULES: tuple[Rule, ...] = (*RECORD_RULES, *ANSWER_RULES)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

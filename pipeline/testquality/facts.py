@@ -18,6 +18,31 @@ if TYPE_CHECKING:
 _MAD_TO_SD = 1.4826
 #: Fewest rows from which a level or a slope is taken [rows].
 FEW = 5
+#: Standard errors from which a slope is one [1]: slow noise makes them too small by about two.
+_CLEAR_SLOPE = 4.0
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Line:
+    """A straight line through the second half of a baseline.
+
+    Attributes
+    ----------
+    slope, error : float
+        Slope and its standard error [PV unit / s].
+    at_move : float
+        Where the line is at the move [PV unit].
+    scatter : float
+        Robust standard deviation about the line [PV unit].
+    clear : bool
+        The slope is more than noise.
+    """
+
+    slope: float
+    error: float
+    at_move: float
+    scatter: float
+    clear: bool
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -35,6 +60,9 @@ class Answer:
         Time from the move to 63 % of that [s]; rows between 10 and 90 % of it.
     late : float
         Share of the travel made in the last fifth of the hold [1].
+    over_noise : float
+        Largest distance from where the PV was going before the move, over the noise and over how
+        badly that is known [1]: a ramp that stops is an answer, a drift that goes on is none.
     """
 
     bump: Bump
@@ -43,6 +71,7 @@ class Answer:
     rise_s: float
     rise_rows: int
     late: float
+    over_noise: float
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -95,7 +124,7 @@ def gather(log: Log, bumps: tuple[Bump, ...], sheet: LoopSheet) -> Facts:
     steps = steps[steps > 1e-9 * max(float(np.ptp(distinct)), 1e-300)] if distinct.size > 1 else steps
     resolution = float(steps.min()) if steps.size else 0.0
     noise = _noise(t, pv, bumps, resolution)
-    answers = tuple(a for b in bumps if b.used for a in [_answer(t, pv, b)] if a is not None)
+    answers = tuple(a for b in bumps if b.used for a in [_answer(t, pv, b, noise)] if a is not None)
     return Facts(
         log=log,
         bumps=bumps,
@@ -122,16 +151,43 @@ def _noise(
         return 0.0
     steps = np.diff(pv)
     fast = _MAD_TO_SD * float(np.median(np.abs(steps - np.median(steps)))) / np.sqrt(2.0)
-    slow = 0.0
-    if bumps:
-        start, at = bumps[0].start_s, bumps[0].moves[0].at_s
-        base = (t >= 0.5 * (start + at)) & (t < at)
-        if int(base.sum()) >= 2 * FEW:
-            x = t[base] - t[base].mean()
-            y = pv[base] - pv[base].mean()
-            rest = y - x * (float(x @ y) / float(x @ x))
-            slow = _MAD_TO_SD * float(np.median(np.abs(rest - np.median(rest))))
+    line = straight_line(t, pv, bumps[0]) if bumps else None
+    slow = line.scatter if line else 0.0
     return float(max(fast, slow, resolution / np.sqrt(12.0)))
+
+
+def straight_line(t: NDArray[np.float64], pv: NDArray[np.float64], bump: Bump) -> Line | None:
+    """Draw a straight line through the second half of a bump's baseline.
+
+    Parameters
+    ----------
+    t, pv : (n,) ndarray
+        Rows that hold a PV [s, PV unit].
+    bump : Bump
+
+    Returns
+    -------
+    Line or None
+        None where there are too few rows.
+    """
+    at = bump.moves[0].at_s
+    base = (t >= 0.5 * (bump.start_s + at)) & (t < at)
+    n = int(np.count_nonzero(base))
+    if n < 2 * FEW:
+        return None
+    middle, level = float(t[base].mean()), float(pv[base].mean())
+    x, y = t[base] - middle, pv[base] - level
+    slope = float(x @ y) / float(x @ x)
+    rest = y - x * slope
+    error = float(np.sqrt(float(rest @ rest) / (n - 2) / float(x @ x)))
+    scatter = _MAD_TO_SD * float(np.median(np.abs(rest - np.median(rest))))
+    return Line(
+        slope=slope,
+        error=error,
+        at_move=level + slope * (at - middle),
+        scatter=scatter,
+        clear=abs(slope) > _CLEAR_SLOPE * error,
+    )
 
 
 def _without_spikes(values: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -146,7 +202,7 @@ def _without_spikes(values: NDArray[np.float64]) -> NDArray[np.float64]:
     )
 
 
-def _answer(t: NDArray[np.float64], pv: NDArray[np.float64], bump: Bump) -> Answer | None:
+def _answer(t: NDArray[np.float64], pv: NDArray[np.float64], bump: Bump, noise: float) -> Answer | None:
     at = bump.moves[0].at_s
     base = pv[(t >= bump.start_s) & (t < at)]
     hold = (t >= at) & (t <= bump.end_s)
@@ -154,11 +210,15 @@ def _answer(t: NDArray[np.float64], pv: NDArray[np.float64], bump: Bump) -> Answ
         return None
     before = float(np.median(base[-max(3, min(20, base.size // 5)) :]))
     clock, away = t[hold], pv[hold] - before
+    line = straight_line(t, pv, bump)
+    over_noise = _over_noise(clock - at, pv[hold], before, line, noise)
     high, low = float(np.percentile(away, 98.0)), float(np.percentile(away, 2.0))
     travel, sign = (high, 1.0) if high >= -low else (-low, -1.0)
     away = _without_spikes(sign * away)
     if travel <= 0.0:
-        return Answer(bump=bump, before=before, travel=0.0, rise_s=0.0, rise_rows=0, late=0.0)
+        return Answer(
+            bump=bump, before=before, travel=0.0, rise_s=0.0, rise_rows=0, late=0.0, over_noise=over_noise
+        )
     # the last row still below 10 % before the first one above 90 %, so that noise is no start
     top = int(np.argmax(away >= 0.9 * travel))
     below = np.flatnonzero(away[: top + 1] < 0.1 * travel)
@@ -171,5 +231,30 @@ def _answer(t: NDArray[np.float64], pv: NDArray[np.float64], bump: Bump) -> Answ
         else 0.0
     )
     return Answer(
-        bump=bump, before=before, travel=travel, rise_s=max(rise, 0.0), rise_rows=top - bottom, late=late
+        bump=bump,
+        before=before,
+        travel=travel,
+        rise_s=max(rise, 0.0),
+        rise_rows=top - bottom,
+        late=late,
+        over_noise=over_noise,
     )
+
+
+def _over_noise(
+    since: NDArray[np.float64],
+    pv: NDArray[np.float64],
+    before: float,
+    line: Line | None,
+    noise: float,
+) -> float:
+    """Largest distance from the baseline's line, over the noise and the error of drawing that line on."""
+    if line is not None and line.clear:
+        going = line.at_move + line.slope * since
+        unsure = np.hypot(noise, line.error * since)
+    else:
+        going, unsure = np.full(pv.size, before), np.full(pv.size, noise)
+    away = np.abs(_without_spikes(pv - going))
+    if noise <= 0.0:
+        return float(np.inf) if np.any(away > 0.0) else 0.0
+    return float(np.percentile(away / unsure, 98.0))

@@ -1,13 +1,15 @@
 """The verdict on a test: measured logs, and one fault at a time on an invented one."""
 
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
 import pytest
 
 from pipeline.bumps import find_bumps, find_moves
+from pipeline.findings import Caution
 from pipeline.intake import Column, Log, read_log
-from pipeline.settings import LoopSheet
+from pipeline.settings import LoopSheet, load_sheet
 from pipeline.testquality import RULES, Quality, judge
 
 DATA = Path(__file__).parent.parent / "data"
@@ -122,7 +124,9 @@ def _holed() -> np.ndarray:
         (make(pv=_holed()), "gap-on-rise", "care"),
         (make(pv=_frozen()), "frozen-pv", "stop"),
         (make(pv=np.round(CLEAN / 0.5) * 0.5), "quantised-pv", "care"),
-        (make(pv=np.round(CLEAN / 2.0) * 2.0), "quantised-pv", "stop"),
+        # two fifths of the answer; at a fifth a fit still holds, so that is care
+        (make(pv=np.round(CLEAN / 2.0) * 2.0), "quantised-pv", "care"),
+        (make(pv=np.round(CLEAN / 4.0) * 4.0), "quantised-pv", "stop"),
         (make(automatic=np.ones(300, dtype=bool)), "closed-loop", "stop"),
         (
             make(co=np.where(T < 5, 40.0, 45.0), pv=np.interp(T, [0, 9, 60], [50, 50, 60])),
@@ -138,6 +142,80 @@ def test_one_fault_one_finding(log, code, level):
     assert quality.verdict == ("do not use" if stops(quality) else "use with care")
     # a finding ends with an instruction
     assert found.text.rstrip().endswith(".") and len(found.text.split(". ")) + found.text.count(": ") >= 2
+
+
+def _frozen_across() -> np.ndarray:
+    pv = CLEAN.copy()
+    pv[55:120] = pv[55]
+    return pv
+
+
+NOISE = np.random.default_rng(3).normal(0.0, 0.05, 300)
+STEPS = np.where(T < 100, 50.0, 55.0)
+
+
+@pytest.mark.parametrize(
+    ("log", "code"),
+    [
+        # a drift that never heeds the moves travels far and answers nothing
+        (make(pv=50.0 + 0.05 * T + NOISE), "small-move"),
+        (make(pv=50.0 + 0.5 * T + NOISE), "small-move"),
+        (make(pv=_frozen_across()), "frozen-pv"),
+        (make(pv=STEPS, sp=STEPS), "wrong-column"),
+        (make(pv=3.0 + 1.8 * np.where((T < 60) | (T >= 180), 40.0, 45.0)), "wrong-column"),
+        (
+            replace(
+                make(),
+                notes=(Caution(code="duplicates-conflict", level="care", text="60 rows.", value=60.0),),
+            ),
+            "conflicting-rows",
+        ),
+    ],
+)
+def test_a_record_that_cannot_be_trusted_is_refused_for_its_true_reason(log, code):
+    quality = verdict(log)
+    assert quality.verdict == "do not use"
+    assert quality.findings[0].code == code or code in stops(quality)
+
+
+@pytest.mark.parametrize("pv", [50.0 + 0.1 * np.maximum(T - 64.0, 0.0) + NOISE, CLEAN + 0.003 * T])
+def test_ramps_and_answers_on_a_slight_drift_are_answers(pv):
+    co = np.where(T < 60, 40.0, 45.0) if pv[-1] > 60 else None
+    assert not stops(verdict(make(pv=pv, co=co)))
+
+
+def test_an_integrating_process_brought_back_to_level_is_a_good_test():
+    # every second move makes a ramp stop: the level no longer changes, its slope does
+    co = np.where(
+        T < 60, 40.0, np.where(T < 120, 45.0, np.where(T < 180, 40.0, np.where(T < 240, 35.0, 40.0)))
+    )
+    late = np.concatenate([np.full(4, co[0]), co[:-4]])
+    quality = verdict(make(co=co, pv=50.0 + np.cumsum(0.02 * (late - 40.0)) + NOISE))
+    assert quality.verdict == "use" and not cares(quality)
+
+
+def test_a_set_point_that_tracks_the_pv_in_manual_is_no_fault():
+    assert verdict(make(sp=CLEAN)).verdict == "use"
+
+
+def test_moves_in_automatic_are_left_out_and_named():
+    automatic = np.zeros(300, dtype=bool)
+    automatic[:30] = True
+    note = next(f for f in verdict(make(automatic=automatic)).findings if f.code == "moves-left-out")
+    assert note.level == "note" and "automatic" in note.text
+
+
+# demo log: what the README beside it says of it
+DEMO = sorted((Path(__file__).parents[2] / "demo_logs").glob("*.csv"))
+REFUSED = {"heap_temperature_in_automatic": "closed-loop", "sump_level_refused": "small-move"}
+
+
+@pytest.mark.parametrize("path", DEMO, ids=lambda p: p.stem)
+def test_demo_logs_get_the_verdict_their_readme_tells(path):
+    sheet = load_sheet(path.with_suffix(".toml"))
+    quality = verdict(read_log(path, sheet=sheet), sheet)
+    assert stops(quality) == ({REFUSED[path.stem]} if path.stem in REFUSED else set())
+    assert (quality.verdict == "do not use") == (path.stem in REFUSED)
 
 
 def test_few_rows_on_the_rise():
