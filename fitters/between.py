@@ -83,7 +83,6 @@ def gains_by_move(problem: Problem, estimate: Estimate) -> GainsByMove:
     level_only = _solve([*columns, problem.levels[:, :1]], pv)
     if level_only[2] @ level_only[2] < _NO_DRIFT * (residual @ residual):
         jacobian, factors, residual = level_only  # drift and unequal gains imitate each other
-    cov = covariance(jacobian, problem.t, colour(residual, problem.t, jacobian))[:count, :count]
     gains = factors[:count]
     typical = float(np.median(np.abs(gains)))
     known = (np.abs(gains) > _SEEN * typical) & (np.sign(gains) == np.sign(estimate.gains[0]))
@@ -92,14 +91,14 @@ def gains_by_move(problem: Problem, estimate: Estimate) -> GainsByMove:
     if count > 1 and np.count_nonzero(known) > 1:
         largest = float(np.max(np.abs(gains[known])))
         scale[known] = np.abs(gains[known]) / largest
-        high, low = (
-            int(np.argmax(np.where(known, np.abs(gains), -np.inf))),
-            int(np.argmin(np.where(known, np.abs(gains), np.inf))),
-        )
-        between = float(np.sqrt(max(cov[high, high] + cov[low, low] - 2.0 * cov[high, low], 0.0)))
+        high = int(np.argmax(np.where(known, np.abs(gains), -np.inf)))
+        low = int(np.argmin(np.where(known, np.abs(gains), np.inf)))
         gap = abs(gains[high]) - abs(gains[low])
-        clear = gap > _SURE * between or estimate.cost > _EXPLAINED * float(residual @ residual)
-        differ = bool(gap > _APART * np.mean(np.abs(gains[known])) and clear)
+        if gap > _APART * np.mean(np.abs(gains[known])):
+            cov = covariance(jacobian, problem.t, colour(residual, problem.t, jacobian))
+            between = float(np.sqrt(max(cov[high, high] + cov[low, low] - 2.0 * cov[high, low], 0.0)))
+            explained = estimate.cost > _EXPLAINED * float(residual @ residual)
+            differ = bool(gap > _SURE * between or explained)
     first = np.array([float(held.at[group == g][0]) for g in range(count)])
     return GainsByMove(at=first, scale=scale, differ=differ, data=_scaled(problem.data, held, scale[group]))
 

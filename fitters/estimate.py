@@ -32,13 +32,15 @@ _RIVAL_COST = 0.02
 #: Evaluations after which a search is given up; it needs 10 to 30.
 _MOST_EVALUATIONS = 100
 #: Relative change of cost and of parameters at which a search has settled [1].
-_SETTLED_TOLERANCE = 1e-9
+_SETTLED_TOLERANCE = 1e-7
 #: The approach: steps at most, relative gain at which it is content, damping and its changes [1].
-_APPROACH_STEPS = 14
-_APPROACH_TOLERANCE = 1e-3
+_APPROACH_STEPS = 10
+_APPROACH_TOLERANCE = 3e-3
 _FIRST_DAMPING = 1e-3
 _HARDER = 10.0
 _EASIER = 5.0
+#: Keeps a direction without slope from a division by nothing, in squared spreads of the PV [1].
+_TINY = 1e-20
 #: A searched logarithm moves at most this far in one step: a factor of about four.
 _LONGEST_LOG_STEP = 1.4
 #: Costs per row below this, in squared spreads of the PV, are all a perfect fit [1].
@@ -212,8 +214,8 @@ def _approach(problem: Problem, structure: Structure, start: Start) -> _End:
     damping = _FIRST_DAMPING
     for _ in range(_APPROACH_STEPS):
         curvature = slopes @ slopes.T
-        damped = curvature + damping * np.diag(np.diag(curvature) + 1e-300)
-        step = np.linalg.lstsq(damped, -(slopes @ residual), rcond=None)[0]
+        diagonal = np.diagonal(curvature) + _TINY
+        step = np.linalg.solve(curvature + np.diag(damping * diagonal), -(slopes @ residual))
         step[:-1] = np.clip(step[:-1], -_LONGEST_LOG_STEP, _LONGEST_LOG_STEP)
         trial = point + step
         new_residual, new_slopes = problem.project(structure, trial[:-1], float(trial[-1]))

@@ -14,7 +14,8 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
-from scipy.linalg import cholesky_banded, solve_banded, solveh_banded
+from scipy.linalg import solve_banded
+from scipy.linalg.lapack import dpttrf, dpttrs
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -253,7 +254,7 @@ def _from_gram(gram: NDArray[np.float64], log_det: float, count: int) -> tuple[f
 def _precision(t: NDArray[np.float64], correlation: float) -> tuple[NDArray[np.float64], float]:
     """Give the inverse correlation of the slow part, tridiagonal, and log det of the correlation.
 
-    Returns the upper form that `scipy.linalg.solveh_banded` takes: above-diagonal, diagonal.
+    Returns the elements above the diagonal, after a zero, and the diagonal.
     """
     memory = np.exp(-np.diff(t) / correlation)
     fresh = -np.expm1(-2.0 * np.diff(t) / correlation)
@@ -277,12 +278,10 @@ def _weighted(
     by_precision[1:] += precision[0][1:, None] * columns[:-1]
     if share >= 1.0:
         return columns.T @ by_precision, 0.0
-    middle = (1.0 - share) * precision
-    middle[1] += share
-    factor = cholesky_banded(middle)
-    solved = solveh_banded(middle, by_precision)
+    diagonal, below, _ = dpttrf((1.0 - share) * precision[1] + share, (1.0 - share) * precision[0][1:])
+    solved, _ = dpttrs(diagonal, below, by_precision)
     gram = columns.T @ solved
-    return 0.5 * (gram + gram.T), 2.0 * float(np.sum(np.log(factor[1])))
+    return 0.5 * (gram + gram.T), float(np.sum(np.log(diagonal)))
 
 
 def _half_coloured(

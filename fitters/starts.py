@@ -13,9 +13,9 @@ if TYPE_CHECKING:
     from fitters.structures.base import Structure
 
 #: Rows the grid looks at; enough to tell good starts from bad ones.
-_COARSE_ROWS = 100
+_COARSE_ROWS = 64
 #: Dead times tried, from none to most of the time left after the first move.
-_DEAD_TIMES = 11
+_DEAD_TIMES = 10
 #: Groups of dead times that each send their best: one valley often hides another.
 _GROUPS = 3
 #: More of them for a structure with a zero, which can pass for dead time.
