@@ -10,6 +10,11 @@ Level = Literal["stop", "care", "note"]
 #: Worst first: the order in which a reader must see them.
 SEVERITY: dict[str, int] = {"stop": 0, "care": 1, "note": 2}
 
+#: Cautions of level "care" that stand in every report and so do not colour its verdict.
+ALWAYS = frozenset(
+    {"check-action", "equation-and-units", "permit-and-change", "safety-not-assessed", "motion"}
+)
+
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Caution:

@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Literal
 
+from pipeline.findings import ALWAYS
 from pipeline.loop.forms import action_in_words
 from pipeline.record import parts
 from pipeline.record.schema import (
@@ -31,11 +32,6 @@ if TYPE_CHECKING:
     from pipeline.loop.types import Margins
     from pipeline.settings import LoopSheet
     from pipeline.tuning.types import BackedOff, Criteria, Tuning
-
-#: Cautions of level "care" that stand in every report and so do not colour its verdict.
-_ALWAYS = frozenset(
-    {"check-action", "equation-and-units", "permit-and-change", "safety-not-assessed", "motion"}
-)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -173,7 +169,7 @@ def assemble(
     if settings is None:
         verdict = "withheld"
     else:
-        special = any(c.level == "care" and c.code not in _ALWAYS for c in cautions)
+        special = any(c.level == "care" and c.code not in ALWAYS for c in cautions)
         verdict = "ready with cautions" if special else "ready"
     found: dict[str, object] = {}
     if identified is not None:

@@ -47,7 +47,7 @@ def thinned_rows(co: Sequence[float], pv: Sequence[float], *, limit: int = SERIE
         return list(range(n))
     keep = {0, n - 1}
     moves = [i for i in range(1, n) if co[i] != co[i - 1]]
-    if 2 * len(moves) <= limit // 4:
+    if 2 * len(moves) <= limit // 2:
         keep.update(i + k for i in moves for k in (-1, 0))
     stretches = max((limit - len(keep)) // 2, 1)
     for j in range(stretches):

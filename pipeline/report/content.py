@@ -35,9 +35,10 @@ class Table:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Notice:
-    """A caution: its level ("stop", "care", "note"), the sentence, the numbers behind it."""
+    """A caution: its level ("stop", "care", "note"), its code, the sentence, the numbers behind it."""
 
     level: str
+    code: str
     text: str
     measure: str = ""
 

@@ -278,6 +278,7 @@ def _plane(axes: Axes, record: Record, response: NDArray[np.complex128]) -> None
             textcoords="offset points",
             fontsize=8,
             color=OUTPUT,
+            bbox={"facecolor": "white", "edgecolor": "none", "pad": 1.0},
         )
     axes.axhline(0.0, color=FRAME, linewidth=0.4)
     axes.axvline(0.0, color=FRAME, linewidth=0.4)

@@ -112,19 +112,43 @@ def interval(value: float, low: float, high: float, unit: str = "") -> str:
 
 
 def half_width(value: float, low: float, high: float) -> float:
-    """Take half an interval, or its finite side where the other has no end."""
+    """Take half an interval, or its finite side where the other has no end.
+
+    Parameters
+    ----------
+    value, low, high : float
+        Estimate and ends of its interval.
+    """
     if math.isfinite(low) and math.isfinite(high):
         return (high - low) / 2.0
     return abs(value - low) if math.isfinite(low) else abs(high - value)
 
 
 def bounds(low: float, high: float, half: float, unit: str = "") -> str:
-    """Write two ends to the last place `half` supports: "18.9 to 20.4"."""
+    """Write two ends to the last place `half` supports: "18.9 to 20.4".
+
+    Parameters
+    ----------
+    low, high : float
+        Ends of the interval.
+    half : float
+        Half its width.
+    unit : str
+        Put behind it.
+    """
     return _joined(f"{rounded(low, half)} to {rounded(high, half)}", unit)
 
 
 def percent(value: float | None, *, digits: int = 2) -> str:
-    """Write a number that already is in percent: "8.4 %"."""
+    """Write a number that already is in percent: "8.4 %".
+
+    Parameters
+    ----------
+    value : float or None
+        [%].
+    digits : int
+        Significant digits.
+    """
     return plain(value, digits=digits, unit="%")
 
 
@@ -135,7 +159,7 @@ def share(value: float) -> str:
     return percent(100.0 * value)
 
 
-def duration(value: float | None, *, never: str = NO_LIMIT) -> str:
+def duration(value: float | None, *, never: str = NO_LIMIT, digits: int = PLAIN_DIGITS) -> str:
     """Write a time in seconds, minutes or hours, whichever reads best.
 
     Parameters
@@ -144,6 +168,8 @@ def duration(value: float | None, *, never: str = NO_LIMIT) -> str:
         Time [s].
     never : str
         Said for infinity.
+    digits : int
+        Significant digits.
 
     Returns
     -------
@@ -154,7 +180,7 @@ def duration(value: float | None, *, never: str = NO_LIMIT) -> str:
     if math.isinf(value):
         return never
     scale, unit = time_unit(value)
-    return plain(value / scale, unit=unit)
+    return plain(value / scale, digits=digits, unit=unit)
 
 
 def time_unit(longest: float) -> tuple[float, str]:

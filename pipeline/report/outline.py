@@ -9,11 +9,10 @@ from __future__ import annotations
 import hashlib
 from collections.abc import Callable, Mapping
 
-from pipeline.findings import SEVERITY
-from pipeline.record import CautionInfo, Entered, Record, to_json
+from pipeline.findings import ALWAYS, SEVERITY
+from pipeline.record import AsFound, CautionInfo, Entered, Record, to_json
 from pipeline.report import numbers
 from pipeline.report.content import (
-    Block,
     Fact,
     Facts,
     Notice,
@@ -27,7 +26,15 @@ from pipeline.report.content import (
     Table,
 )
 from pipeline.report.evidence import model, provenance, test
-from pipeline.report.performance import degrees, margins, overshoot, prediction
+from pipeline.report.performance import (
+    asked_and_reached,
+    degrees,
+    loop,
+    overshoot,
+    phase_margin,
+    prediction,
+    settled,
+)
 
 _HEADLINES = {
     "ready": "Settings are ready to enter.",
@@ -72,7 +79,8 @@ def build_outline(record: Record) -> Outline:
     Returns
     -------
     Outline
-        The cautions stand first; a withheld record leads with its cause and what to do next.
+        The cautions stand first, then settings, margins and what to do; a withheld record leads
+        with its cause.
     """
     sections = _WITHHELD if record.verdict == "withheld" else _WITH_SETTINGS
     built = (section(record) for section in sections)
@@ -101,8 +109,9 @@ def _summary(record: Record) -> tuple[Fact, ...]:
         return tuple(Fact(label="Cause", text=c.text) for c in stops)
     rows = _entries(record.controller.as_entered)
     rows.append(Fact(label="Controller", text=record.controller.kind))
-    rows.append(Fact(label="Phase margin", text=degrees(record.margins.phase_margin_deg)))
+    rows.append(Fact(label="Phase margin", text=phase_margin(record)))
     rows.append(Fact(label="Predicted overshoot", text=overshoot(record, record.prediction)))
+    rows.append(Fact(label="Settled within 5 %", text=settled(record.prediction)))
     rows.append(Fact(label="Action", text=record.action_words or record.controller.action))
     return tuple(rows)
 
@@ -124,10 +133,21 @@ def _sentence(name: str) -> str:
 
 
 def _cautions(record: Record) -> Section | None:
-    ordered = sorted(record.cautions, key=lambda c: SEVERITY[c.level])
-    if not ordered:
+    """Show what withholds or restricts the settings."""
+    return _notices(record, "cautions", "Cautions", ("stop", "care"))
+
+
+def _notes(record: Record) -> Section | None:
+    """Show what informs."""
+    return _notices(record, "notes", "Notes", ("note",))
+
+
+def _notices(record: Record, key: str, title: str, levels: tuple[str, ...]) -> Section | None:
+    chosen = [c for c in record.cautions if c.level in levels]
+    if not chosen:
         return None
-    return Section(key="cautions", title="Cautions", blocks=(Notices(items=tuple(map(_notice, ordered))),))
+    ordered = sorted(chosen, key=lambda c: (SEVERITY[c.level], c.code in ALWAYS))
+    return Section(key=key, title=title, blocks=(Notices(items=tuple(map(_notice, ordered))),))
 
 
 def _notice(caution: CautionInfo) -> Notice:
@@ -136,50 +156,62 @@ def _notice(caution: CautionInfo) -> Notice:
         parts.append(f"observed {numbers.plain(caution.value)}")
     if caution.limit is not None:
         parts.append(f"limit {numbers.plain(caution.limit)}")
-    return Notice(level=caution.level, text=caution.text, measure=", ".join(parts))
+    return Notice(level=caution.level, code=caution.code, text=caution.text, measure=", ".join(parts))
 
 
 def _settings(record: Record) -> Section | None:
     c = record.controller
     if c is None:
         return None
-    blocks: list[Block] = [
-        Table(
-            title="As entered in the controller",
-            head=("Setting", "Enter"),
-            rows=tuple((f.label, f.text) for f in _entries(c.as_entered)),
-            numeric=(False, False),
-        ),
-        Facts(
-            rows=(
-                Fact(label="Action", text=record.action_words or c.action, note="check before automatic"),
-                Fact(label="Controller's equation", text=c.equation),
-            )
-        ),
-        Table(
-            title="The same in the standard equation",
-            head=("Setting", "Value"),
-            rows=_standard_rows(record),
-            numeric=(False, False),
-        ),
-    ]
-    if record.as_found is not None:
-        found = record.as_found
-        rows = [(f.label, f.text) for f in _entries(found.as_entered)]
-        if found.margins is not None:
-            rows.append(("Phase margin on this model", f"{numbers.plain(found.margins.phase_margin_deg)}°"))
-            rows.append(("Maximum sensitivity Ms", numbers.plain(found.margins.max_sensitivity)))
-        if found.overshoot_pct is not None:
-            rows.append(("Predicted overshoot", numbers.percent(found.overshoot_pct)))
-        blocks.append(
-            Table(
-                title="As found, and the settings to go back to",
-                head=("Setting", "Value"),
-                rows=tuple(rows),
-                numeric=(False, False),
-            )
+    facts = Facts(
+        rows=(
+            Fact(label="Action", text=record.action_words or c.action, note="check before automatic"),
+            Fact(label="Controller's equation", text=c.equation),
         )
-    return Section(key="settings", title="Settings", blocks=tuple(blocks))
+    )
+    return Section(key="settings", title="Settings", blocks=(_entry_table(record), facts))
+
+
+def _entry_table(record: Record) -> Table:
+    """Set what to enter beside what was found, and what each means on this model."""
+    c, p, found = record.controller, record.prediction, record.as_found
+    assert c is not None and p is not None
+    rows: list[tuple[str, str, str]] = []
+    before = {} if found is None else found.as_entered
+    for name in dict.fromkeys([*c.as_entered, *before]):
+        new = _entry(c.as_entered[name]) if name in c.as_entered else "none"
+        old = _entry(before[name]) if name in before else ("none" if before else numbers.NOT_GIVEN)
+        rows.append((_sentence(name), new, old))
+    rows.append(("Phase margin on this model", phase_margin(record), _found_margin(found)))
+    over = numbers.NOT_GIVEN
+    if found is not None:
+        over = "none: unstable" if found.overshoot_pct is None else numbers.percent(found.overshoot_pct)
+    rows.append(("Predicted overshoot", overshoot(record, p), over))
+    return Table(
+        title="What to enter, and what was found (the settings to go back to)",
+        head=("Setting", "Enter", "As found"),
+        rows=tuple(rows),
+        numeric=(False, False, False),
+    )
+
+
+def _found_margin(found: AsFound | None) -> str:
+    if found is None or found.margins is None:
+        return numbers.NOT_GIVEN
+    return degrees(found.margins.phase_margin_deg)
+
+
+def _in_full(record: Record) -> Section | None:
+    """Show the settings once more in the standard equation."""
+    if record.controller is None:
+        return None
+    table = Table(
+        title="The same settings in the standard equation",
+        head=("Setting", "Value"),
+        rows=_standard_rows(record),
+        numeric=(False, False),
+    )
+    return Section(key="standard", title="Settings in full", blocks=(table,))
 
 
 def _standard_rows(record: Record) -> tuple[tuple[str, str], ...]:
@@ -219,14 +251,18 @@ def _sign_off(record: Record) -> Section:
     return Section(key="sign-off", title="Sign-off", blocks=(Facts(rows=papers), Signatures(rows=rows)))
 
 
+#: First what someone needs to decide and to enter, then the evidence, then the signatures.
 _WITH_SETTINGS: tuple[Callable[[Record], Section | None], ...] = (
     _cautions,
     _settings,
-    margins,
-    prediction,
+    asked_and_reached,
     _next_steps,
+    prediction,
+    loop,
     test,
     model,
+    _in_full,
+    _notes,
     _not_assessed,
     provenance,
     _sign_off,
@@ -237,6 +273,7 @@ _WITHHELD: tuple[Callable[[Record], Section | None], ...] = (
     _next_steps,
     test,
     model,
+    _notes,
     _not_assessed,
     provenance,
     _sign_off,

@@ -20,24 +20,36 @@ _CRITERIA = {
 #: itself, so that a criterion just missed never reads as met.
 _READING = 0.035
 
+#: Below this nobody sees a peak on a trend [%].
+_PEAK_SEEN = 1.5
+
+#: Digits of a predicted time: models know their lags to a few percent at best.
+_TIME_DIGITS = 2
+
 #: An overshoot is shown at least to this [%]: nobody reads less off a trend.
 _OVERSHOOT_READING = 0.5
 
 
-def margins(record: Record) -> Section | None:
-    """Margins asked for, reached, and held over the plausible processes."""
+def asked_and_reached(record: Record) -> Section | None:
+    """Set the margins asked for beside those reached and held over the plausible processes."""
     if record.margins is None:
         return None
-    blocks: list[Block] = [_margin_table(record), Prose(text=_what_bound(record))]
-    blocks.append(Facts(rows=_further_margins(record)))
+    blocks = (_margin_table(record), Prose(text=_what_bound(record)))
+    return Section(key="margins", title="Margins", blocks=blocks)
+
+
+def loop(record: Record) -> Section | None:
+    """Show the loop's frequency response and what else it says."""
+    if record.margins is None:
+        return None
     alt = (
         f"Frequency response of the loop. Gain crossover at {_per_second(record.margins.gain_crossover)}, "
         f"phase margin {degrees(record.margins.phase_margin_deg)}, gain margin "
         f"{numbers.plain(record.margins.gain_margin)}, maximum sensitivity "
         f"{numbers.plain(record.margins.max_sensitivity)}."
     )
-    blocks.append(Picture(name="loop", title="How far the loop stays from instability", alt=alt))
-    return Section(key="margins", title="Margins", blocks=tuple(blocks))
+    picture = Picture(name="loop", title="How far the loop stays from instability", alt=alt)
+    return Section(key="loop", title="The loop", blocks=(picture, Facts(rows=_further_margins(record))))
 
 
 def _margin_table(record: Record) -> Table:
@@ -121,11 +133,13 @@ def _further_margins(record: Record) -> tuple[Fact, ...]:
         Fact(label="Gain margin in decibels", text=_decibels(m.gain_margin)),
         Fact(label="Lower limit of the gain", text=_lower_limit(m.gain_reduction_margin)),
         Fact(
-            label="Delay margin", text=numbers.duration(m.delay_margin_s), note="extra dead time it can bear"
+            label="Delay margin",
+            text=numbers.duration(m.delay_margin_s, digits=_TIME_DIGITS),
+            note="extra dead time it can bear",
         ),
         Fact(label="Gain crossover", text=_per_second(m.gain_crossover)),
         Fact(label="Phase crossover", text=_per_second(m.phase_crossover)),
-        Fact(label="Peak of the complementary sensitivity Mt", text=numbers.plain(m.max_complementary)),
+        Fact(label="Peak of the complementary sensitivity Mt", text=f"{m.max_complementary:.2f}"),
     ]
     if record.bands is not None:
         lost = record.bands.unstable_share
@@ -144,7 +158,24 @@ def _lower_limit(factor: float) -> str:
 
 
 def _per_second(omega: float) -> str:
-    return "none" if math.isinf(omega) else numbers.plain(omega, unit="rad/s")
+    return "none" if math.isinf(omega) else numbers.plain(omega, digits=2, unit="rad/s")
+
+
+def phase_margin(record: Record) -> str:
+    """Write the phase margin reached with its 5 to 95 % band.
+
+    Parameters
+    ----------
+    record : Record
+        With margins.
+    """
+    assert record.margins is not None
+    reached = record.margins.phase_margin_deg
+    if record.bands is None or math.isinf(record.bands.phase_margin_deg[2]):
+        return degrees(reached)
+    low, _, high = record.bands.phase_margin_deg
+    half = min(numbers.half_width(reached, low, high), _READING * reached)
+    return f"{numbers.rounded(reached, half)}° ({numbers.bounds(low, high, half)}°)"
 
 
 def degrees(angle: float) -> str:
@@ -161,8 +192,10 @@ def prediction(record: Record) -> Section | None:
     rows = [
         Fact(label="Overshoot", text=overshoot(record, p), note="of the set-point change"),
         *_first_peak(p),
-        Fact(label="Rise time, 10 to 90 %", text=numbers.duration(p.rise_s, never="never")),
-        Fact(label="Settled within 5 %", text=numbers.duration(p.settling_s, never="never")),
+        Fact(
+            label="Rise time, 10 to 90 %", text=numbers.duration(p.rise_s, never="never", digits=_TIME_DIGITS)
+        ),
+        Fact(label="Settled within 5 %", text=settled(p)),
         Fact(
             label="Largest CO move",
             text=numbers.plain(p.co_peak, unit=co),
@@ -183,16 +216,30 @@ def prediction(record: Record) -> Section | None:
             alt="Predicted response of PV and CO to a unit set-point step. "
             f"Overshoot {overshoot(record, p)}; rise time {numbers.duration(p.rise_s, never='endless')}.",
         ),
-        Prose(
-            text="The prediction is of a linear model without limits, sticking or noise. "
-            f"{_stop_rule(record)}"
-        ),
+        Prose(text="The prediction is of a linear model without limits, sticking or noise."),
     ]
     return Section(key="prediction", title="Predicted response", blocks=tuple(blocks))
 
 
+def settled(p: PredictionInfo) -> str:
+    """Write when the PV is within 5 % for good.
+
+    Parameters
+    ----------
+    p : PredictionInfo
+    """
+    return numbers.duration(p.settling_s, never="never", digits=_TIME_DIGITS)
+
+
 def overshoot(record: Record, p: PredictionInfo) -> str:
-    """Write the predicted overshoot with its 5 to 95 % band."""
+    """Write the predicted overshoot with its 5 to 95 % band.
+
+    Parameters
+    ----------
+    record : Record
+    p : PredictionInfo
+        Its prediction.
+    """
     if record.bands is None:
         return numbers.percent(p.overshoot_pct)
     low, _, high = record.bands.overshoot_pct
@@ -200,17 +247,7 @@ def overshoot(record: Record, p: PredictionInfo) -> str:
 
 
 def _first_peak(p: PredictionInfo) -> tuple[Fact, ...]:
-    if p.overshoot_pct <= 0.5:  # below this nobody sees a peak on a trend
+    if p.overshoot_pct <= _PEAK_SEEN:
         return ()
     at = p.setpoint.t_s[max(range(len(p.setpoint.pv)), key=p.setpoint.pv.__getitem__)]
-    return (Fact(label="Peak after", text=numbers.duration(at)),)
-
-
-def _stop_rule(record: Record) -> str:
-    if record.bands is None or math.isinf(record.bands.overshoot_pct[2]):
-        return "If the PV grows in two successive half-cycles, return to the as-found settings or to manual."
-    limit = numbers.percent(max(record.bands.overshoot_pct[2], 5.0))
-    return (
-        f"If the first peak stands clearly above {limit}, or the PV grows in two successive half-cycles, "
-        "return to the as-found settings or to manual."
-    )
+    return (Fact(label="Peak after", text=numbers.duration(at, digits=_TIME_DIGITS)),)

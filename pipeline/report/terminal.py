@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from pipeline.findings import SEVERITY
+from pipeline.findings import ALWAYS, SEVERITY
 from pipeline.report import numbers
 from pipeline.report.content import Fact, Notices, Outline, Steps
 
@@ -30,6 +30,9 @@ _GAP = 3.5
 def summary_text(outline: Outline) -> str:
     """Say in short what the report says: verdict, settings or cause, every caution.
 
+    Cautions that stop or restrict are sentences; those of every report, and the notes, are
+    named by their codes, since their sentences stand in the report.
+
     Parameters
     ----------
     outline : Outline
@@ -45,7 +48,10 @@ def summary_text(outline: Outline) -> str:
     blocks = [block for section in outline.sections for block in section.blocks]
     for block in blocks:
         if isinstance(block, Notices):
-            lines += [line for n in block.items for line in _hanging(n.level.ljust(6), n.text)]
+            spoken = [n for n in block.items if n.level != "note" and n.code not in ALWAYS]
+            lines += [line for n in spoken for line in _hanging(n.level.ljust(6), n.text)]
+            named = [n for n in block.items if n not in spoken]
+            lines += _hanging(f"{named[0].level:6}", ", ".join(n.code for n in named)) if named else []
     if outline.verdict == "withheld":
         steps = [step for block in blocks if isinstance(block, Steps) for step in block.items]
         lines += ["What to do next:"] if steps else []
@@ -54,7 +60,12 @@ def summary_text(outline: Outline) -> str:
 
 
 def summary_line(outline: Outline) -> str:
-    """Say the outcome in one line, for a list of many logs."""
+    """Say the outcome in one line, for a list of many logs.
+
+    Parameters
+    ----------
+    outline : Outline
+    """
     told = "; ".join(f"{f.label} {f.text}" for f in outline.summary) or outline.headline
     return printable(f"{outline.tag}: {outline.verdict}. {told}")
 
