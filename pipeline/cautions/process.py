@@ -13,7 +13,7 @@ if TYPE_CHECKING:
     from pipeline.cautions.facts import Facts
 
 #: Relative half-width of the gain's interval above which it restricts, and above which it withholds [1].
-#: With 20 % scatter of the gain a phase margin of 60 degrees means 35 to 76 (common practice: twice that is blind).
+#: With 20 % scatter of the gain a phase margin of 60 degrees means 35 to 76 (twice that is blind).
 _GAIN_CARE = 0.25
 _GAIN_STOP = 0.60
 #: Dead time against the sum of lags beyond which proportional action alone misleads [1].

@@ -87,7 +87,7 @@ def batch_setpoint(
         direct, _, loop_order = _leading(fb_num, fb_den, g_num, g_den)
         direct = np.where(loop_order == 0, direct, 0.0)
         y = y - np.where(stepped[:, None], first[:, None] * late / (s * (1.0 + direct[:, None] * late)), 0.0)
-        known += np.where(stepped[:, None], _stairs(first, direct, delay, t), 0.0)
+        known += np.where(stepped[:, None], _stairs(first, direct, delay, np.asarray(t, dtype=float)), 0.0)
     if cornered.any():
         power = np.where(cornered, order, 1)
         speed = np.where(-second / power > 0.0, -second / power, 10.0 / horizon)
@@ -99,7 +99,7 @@ def batch_setpoint(
     y[:, -1] *= 0.5
     response = np.fft.irfft(y, n=count, axis=1) * (count / period) * np.exp(a * t) + known
     response[since < 0.0] = 0.0
-    return t[:points], np.asarray(response[:, :points], dtype=float)
+    return np.asarray(t[:points], dtype=float), np.asarray(response[:, :points], dtype=float)
 
 
 def _stacked(polys: list[Reals]) -> Reals:

@@ -50,6 +50,21 @@ def extra_dead_time(controller: Controller) -> float:
     return 0.5 * controller.scan + controller.compute_delay
 
 
+def product(p: ArrayLike, q: ArrayLike) -> Polynomial:
+    """Multiply two polynomials.
+
+    Parameters
+    ----------
+    p, q : (n,), (m,) array_like
+        Coefficients in descending powers of s.
+
+    Returns
+    -------
+    (n + m - 1,) ndarray
+    """
+    return np.asarray(np.polymul(np.asarray(p), np.asarray(q)), dtype=float)
+
+
 def feedback_path(controller: Controller) -> tuple[Polynomial, Polynomial]:
     """Give the path from PV to CO as a ratio of polynomials, sign of the feedback left out.
 
@@ -64,7 +79,7 @@ def feedback_path(controller: Controller) -> tuple[Polynomial, Polynomial]:
     """
     num, den = _terms(controller, 1.0, 1.0)
     if controller.pv_filter > 0.0:
-        den = np.polymul(den, [controller.pv_filter, 1.0])
+        den = product(den, [controller.pv_filter, 1.0])
     return num, den
 
 
@@ -124,9 +139,7 @@ def controller_response(
     return paths[0], paths[1]
 
 
-def loop_response(
-    model: ProcessModel, controller: Controller, omega: ArrayLike
-) -> NDArray[np.complex128]:
+def loop_response(model: ProcessModel, controller: Controller, omega: ArrayLike) -> NDArray[np.complex128]:
     """Evaluate the loop L(j omega): feedback path times process, dead time exact.
 
     Parameters

@@ -17,8 +17,12 @@ Equation = Literal["standard", "series", "parallel"]
 Proportional = Literal["gain", "band"]
 Basis = Literal["span", "engineering"]
 Integral = Literal[
-    "seconds per repeat", "minutes per repeat", "repeats per minute", "repeats per second",
-    "gain per second", "gain per minute",
+    "seconds per repeat",
+    "minutes per repeat",
+    "repeats per minute",
+    "repeats per second",
+    "gain per second",
+    "gain per minute",
 ]
 Derivative = Literal["seconds", "minutes", "gain in seconds", "gain in minutes"]
 
@@ -156,7 +160,11 @@ def enter(controller: Controller, entry: Entry) -> Entered:
     """
     gain, ti, td = controller.gain, controller.integral_time, controller.derivative_time
     if controller.kind == "I":
-        return Entered(proportional=None, integral=_integral_only(gain / ti * entry.span_factor(), entry), derivative=None)
+        return Entered(
+            proportional=None,
+            integral=_integral_only(gain / ti * entry.span_factor(), entry),
+            derivative=None,
+        )
     if entry.equation == "series":
         gain, ti, td = to_series(gain, ti, td)
     gain *= entry.span_factor()
@@ -192,11 +200,15 @@ def understand(entered: Entered, entry: Entry) -> tuple[float | None, float, flo
     UsageError
         If a number that must be above zero is not, or a span is missing.
     """
-    for name, value in (("proportional setting", entered.proportional), ("integral setting", entered.integral)):
+    for name, value in (
+        ("proportional setting", entered.proportional),
+        ("integral setting", entered.integral),
+    ):
         if value is not None and not value > 0.0:
             raise UsageError(
                 f"The {name} is {value:g}, which switches the action off on some controllers and makes it "
-                "endless on others.", remedy="Leave the setting out if the action is off.",
+                "endless on others.",
+                remedy="Leave the setting out if the action is off.",
             )
     factor = entry.span_factor()
     if entered.proportional is None:
@@ -219,39 +231,52 @@ def understand(entered: Entered, entry: Entry) -> tuple[float | None, float, flo
 def _integral_only(gain: float, entry: Entry) -> float:
     """Enter an integral gain per second: a time for one repeat of unit gain where times are asked."""
     return {
-        "seconds per repeat": 1.0 / gain, "minutes per repeat": 1.0 / gain / _MINUTE,
-        "repeats per minute": gain * _MINUTE, "repeats per second": gain,
-        "gain per second": gain, "gain per minute": gain * _MINUTE,
+        "seconds per repeat": 1.0 / gain,
+        "minutes per repeat": 1.0 / gain / _MINUTE,
+        "repeats per minute": gain * _MINUTE,
+        "repeats per second": gain,
+        "gain per second": gain,
+        "gain per minute": gain * _MINUTE,
     }[entry.integral]
 
 
 def _integral(gain: float, ti: float, entry: Entry) -> float:
     return {
-        "seconds per repeat": ti, "minutes per repeat": ti / _MINUTE,
-        "repeats per minute": _MINUTE / ti, "repeats per second": 1.0 / ti,
-        "gain per second": gain / ti, "gain per minute": gain / ti * _MINUTE,
+        "seconds per repeat": ti,
+        "minutes per repeat": ti / _MINUTE,
+        "repeats per minute": _MINUTE / ti,
+        "repeats per second": 1.0 / ti,
+        "gain per second": gain / ti,
+        "gain per minute": gain / ti * _MINUTE,
     }[entry.integral]
 
 
 def _integral_time(gain: float, value: float, entry: Entry) -> float:
     return {
-        "seconds per repeat": value, "minutes per repeat": value * _MINUTE,
-        "repeats per minute": _MINUTE / value, "repeats per second": 1.0 / value,
-        "gain per second": gain / value, "gain per minute": gain / value * _MINUTE,
+        "seconds per repeat": value,
+        "minutes per repeat": value * _MINUTE,
+        "repeats per minute": _MINUTE / value,
+        "repeats per second": 1.0 / value,
+        "gain per second": gain / value,
+        "gain per minute": gain / value * _MINUTE,
     }[entry.integral]
 
 
 def _derivative(gain: float, td: float, entry: Entry) -> float:
     return {
-        "seconds": td, "minutes": td / _MINUTE,
-        "gain in seconds": gain * td, "gain in minutes": gain * td / _MINUTE,
+        "seconds": td,
+        "minutes": td / _MINUTE,
+        "gain in seconds": gain * td,
+        "gain in minutes": gain * td / _MINUTE,
     }[entry.derivative]
 
 
 def _derivative_time(gain: float, value: float, entry: Entry) -> float:
     return {
-        "seconds": value, "minutes": value * _MINUTE,
-        "gain in seconds": value / gain, "gain in minutes": value * _MINUTE / gain,
+        "seconds": value,
+        "minutes": value * _MINUTE,
+        "gain in seconds": value / gain,
+        "gain in minutes": value * _MINUTE / gain,
     }[entry.derivative]
 
 

@@ -70,9 +70,18 @@ def margins_of(loops: LoopStack) -> Margins:
     gains, phases = gain_crossings(s), phase_crossings(s)
     listed = _list(gains, phases)
     if unstable_roots(s)[0] > 0.5:
-        return Margins(stable=False, phase_margin=0.0, gain_margin=1.0, gain_reduction_margin=1.0,
-                       max_sensitivity=np.inf, max_complementary=np.inf, delay_margin=0.0,
-                       gain_crossover=np.inf, phase_crossover=np.inf, crossings=listed)
+        return Margins(
+            stable=False,
+            phase_margin=0.0,
+            gain_margin=1.0,
+            gain_reduction_margin=1.0,
+            max_sensitivity=np.inf,
+            max_complementary=np.inf,
+            delay_margin=0.0,
+            gain_crossover=np.inf,
+            phase_crossover=np.inf,
+            crossings=listed,
+        )
     pm, pm_omega, delay = np.inf, np.inf, np.inf
     if gains.row.size:
         worst = int(np.argmin(np.abs(gains.past)))
@@ -84,10 +93,18 @@ def margins_of(loops: LoopStack) -> Margins:
         nearest = int(np.argmin(np.abs(-phases.log_gain - np.log(gm[0])))) if np.isfinite(gm[0]) else -1
         if nearest >= 0 and abs(-phases.log_gain[nearest] - np.log(gm[0])) < 1e-9:
             gm_omega = float(phases.omega[nearest])
-    return Margins(stable=True, phase_margin=pm, gain_margin=float(gm[0]),
-                   gain_reduction_margin=float(reduction[0]), max_sensitivity=float(_sensitivity(s)[0]),
-                   max_complementary=float(_complementary(s)[0]), delay_margin=delay,
-                   gain_crossover=pm_omega, phase_crossover=gm_omega, crossings=listed)
+    return Margins(
+        stable=True,
+        phase_margin=pm,
+        gain_margin=float(gm[0]),
+        gain_reduction_margin=float(reduction[0]),
+        max_sensitivity=float(_sensitivity(s)[0]),
+        max_complementary=float(_complementary(s)[0]),
+        delay_margin=delay,
+        gain_crossover=pm_omega,
+        phase_crossover=gm_omega,
+        crossings=listed,
+    )
 
 
 def batch_margins(models: Sequence[ProcessModel], controller: Controller) -> MarginTable:
@@ -160,7 +177,10 @@ def _gain_limits(s: Sweep, phases: Crossings) -> tuple[Reals, Reals]:
         # L(inf) turns for ever with dead time, so its size is a limit whatever its sign.
         ends = [
             (1.0 / np.abs(static), (static < 0.0) & np.isfinite(static)),
-            (1.0 / np.abs(direct), (direct != 0.0) & np.isfinite(direct) & ((loops.delay > 0.0) | (direct < 0.0))),
+            (
+                1.0 / np.abs(direct),
+                (direct != 0.0) & np.isfinite(direct) & ((loops.delay > 0.0) | (direct < 0.0)),
+            ),
         ]
     for size, real in ends:
         up = np.where(real & (size > 1.0), np.minimum(up, size), up)

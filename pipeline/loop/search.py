@@ -65,9 +65,9 @@ def roots(f: Function, lo: Reals, hi: Reals, *, steps: int = 60) -> Reals:
             xi = (a[i] - b[i]) / (c[i] - b[i])
             phi = (fa[i] - fb[i]) / (fc[i] - fb[i])
             al = (c[i] - a[i]) / (b[i] - a[i])
-            step = fa[i] / (fb[i] - fa[i]) * fc[i] / (fb[i] - fc[i]) + al * fa[i] / (fc[i] - fa[i]) * fb[i] / (
-                fc[i] - fb[i]
-            )
+            step = fa[i] / (fb[i] - fa[i]) * fc[i] / (fb[i] - fc[i]) + al * fa[i] / (fc[i] - fa[i]) * fb[
+                i
+            ] / (fc[i] - fb[i])
         safe = (phi**2 < xi) & ((1.0 - phi) ** 2 < 1.0 - xi) & np.isfinite(step)
         edge = np.minimum(0.5, tol / np.maximum(width, 1e-300))
         t[i] = np.clip(np.where(safe, step, 0.5), edge, 1.0 - edge)

@@ -9,7 +9,7 @@ import numpy as np
 from scipy.signal import lfilter
 
 from pipeline.errors import UsageError
-from pipeline.loop.controller import extra_dead_time, feedback_path, setpoint_path, sign
+from pipeline.loop.controller import extra_dead_time, feedback_path, product, setpoint_path, sign
 from pipeline.loop.metrics import final_value, integral_value, measure, noise_gain
 from pipeline.loop.stack import stack_loops
 from pipeline.loop.stepping import Recursion, closed_loop, spectral_radius
@@ -53,12 +53,14 @@ class _Plan:
 
 
 def _ratio(model: ProcessModel, path: Ratio) -> Ratio:
-    return np.polymul(path[0], model.numerator), np.polymul(path[1], model.denominator)
+    return product(path[0], model.numerator), product(path[1], model.denominator)
 
 
 def _check(model: ProcessModel, controller: Controller) -> None:
-    if controller.kind in ("PD", "PID") and controller.derivative_time > 0.0 and (
-        controller.derivative_filter <= 0.0
+    if (
+        controller.kind in ("PD", "PID")
+        and controller.derivative_time > 0.0
+        and (controller.derivative_filter <= 0.0)
     ):
         raise UsageError(
             "A derivative without a filter cannot be predicted in time.",
@@ -66,8 +68,10 @@ def _check(model: ProcessModel, controller: Controller) -> None:
         )
     direct = model.high_frequency_gain * feedback_path(controller)[0][0]
     late = model.dead_time + extra_dead_time(controller)
-    if late == 0.0 and feedback_path(controller)[0].size == feedback_path(controller)[1].size and (
-        direct / feedback_path(controller)[1][0] == -1.0
+    if (
+        late == 0.0
+        and feedback_path(controller)[0].size == feedback_path(controller)[1].size
+        and (direct / feedback_path(controller)[1][0] == -1.0)
     ):
         raise UsageError(
             "Process and controller both answer at once and cancel: the loop has no solution.",
@@ -137,7 +141,7 @@ def predict(model: ProcessModel, controller: Controller) -> Prediction:
     setpoint, co = _trajectory(controller, sp, sp_run, plan.delay, step=1.0)
     load_part, _ = _trajectory(controller, load, load_run, plan.delay - late, step=0.0)
     final = final_value(to_sp, plan.loop)
-    m = measure(plan.delay + plan.h * np.arange(sp.size), sp, final)
+    m = measure(plan.delay + plan.h * np.arange(sp.size, dtype=float), sp, final)
     return Prediction(
         setpoint=setpoint,
         load=load_part,
@@ -157,7 +161,9 @@ def overshoot(model: ProcessModel, controller: Controller) -> float:
     plan = _plan(model, controller)
     to_sp = _ratio(model, setpoint_path(controller))
     sp = closed_loop(plan.loop, to_sp, delay=plan.delay, h=plan.h).run(plan.n)
-    return measure(plan.delay + plan.h * np.arange(sp.size), sp, final_value(to_sp, plan.loop)).overshoot
+    return measure(
+        plan.delay + plan.h * np.arange(sp.size, dtype=float), sp, final_value(to_sp, plan.loop)
+    ).overshoot
 
 
 def stable_in_time(model: ProcessModel, controller: Controller) -> bool:
@@ -197,7 +203,7 @@ def _trajectory(
         held = np.where(late >= 0, stairs[np.clip(late, 0, pv.size - 1)], 0.0)
     co = _output(controller, smooth, held, h, step)
     stride = max(1, -(-smooth.size // _KEPT))
-    t = h * np.arange(smooth.size)
+    t = h * np.arange(smooth.size, dtype=float)
     keep = slice(None, None, stride)
     return Trajectory(t=_frozen(t[keep]), pv=_frozen((smooth + held)[keep]), co=_frozen(co[keep])), co
 
@@ -228,7 +234,7 @@ def _integral(smooth: Reals, held: Reals, h: float) -> Reals:
 def _output(c: Controller, smooth: Reals, held: Reals, h: float, step: float) -> Reals:
     """Work out the CO from the PV: the controller's equation, term by term."""
     k = sign(c.action) * c.gain
-    t = h * np.arange(smooth.size)
+    t = h * np.arange(smooth.size, dtype=float)
     fs, fh = _lag(c.pv_filter, smooth, held, h)
     pv = fs + fh
     co = np.zeros(smooth.size)

@@ -69,8 +69,8 @@ class Recursion:
             return np.full(n, self.jump / (1.0 + self.direct))
         passes = np.arange(n) // self.line + 1
         if self.direct == -1.0:
-            return self.jump * passes
-        return self.jump * (1.0 - (-self.direct) ** passes) / (1.0 + self.direct)
+            return np.asarray(self.jump * passes, dtype=float)
+        return np.asarray(self.jump * (1.0 - (-self.direct) ** passes) / (1.0 + self.direct), dtype=float)
 
 
 def exponential(a: Reals) -> Reals:

@@ -82,8 +82,14 @@ def frequency_grid(loops: LoopStack, *, per_decade: int, floor: float) -> Reals:
     """
     m = len(loops)
     delay = float(loops.delay.max(initial=0.0))
-    pick = np.unique(np.concatenate([np.linspace(0, m - 1, min(m, _SCALE_ROWS)).astype(int),
-                                     [int(np.argmin(loops.delay)), int(np.argmax(loops.delay))]]))
+    pick = np.unique(
+        np.concatenate(
+            [
+                np.linspace(0, m - 1, min(m, _SCALE_ROWS)).astype(int),
+                [int(np.argmin(loops.delay)), int(np.argmax(loops.delay))],
+            ]
+        )
+    )
     marks = [1.0 / loops.delay[loops.delay > 0.0]]
     dense = []
     for i in pick:
@@ -95,7 +101,9 @@ def frequency_grid(loops: LoopStack, *, per_decade: int, floor: float) -> Reals:
             marks.append(size[size > 0.0])
             light = r[(r.imag > 0.0) & (np.abs(r.real) < 0.3 * size)]
             for root in light:
-                spread = np.sinh(np.linspace(-6.0, 6.0, 61 if m == 1 else 13)) * max(abs(root.real), 1e-6 * abs(root))
+                spread = np.sinh(np.linspace(-6.0, 6.0, 61 if m == 1 else 13)) * max(
+                    abs(root.real), 1e-6 * abs(root)
+                )
                 dense.append(root.imag + spread)
         marks.append(_asymptotes(num, den))
     scale = np.concatenate(marks)
@@ -122,8 +130,9 @@ def frequency_grid(loops: LoopStack, *, per_decade: int, floor: float) -> Reals:
 def _bare(loops: LoopStack, rows: Rows, omega: Reals) -> NDArray[np.complex128]:
     from dataclasses import replace
 
-    part = replace(loops, numerator=loops.numerator[rows], denominator=loops.denominator[rows],
-                   delay=np.zeros(rows.size))
+    part = replace(
+        loops, numerator=loops.numerator[rows], denominator=loops.denominator[rows], delay=np.zeros(rows.size)
+    )
     return part.response(omega)
 
 
@@ -158,11 +167,24 @@ def sweep(loops: LoopStack, *, per_decade: int, floor: float, omega: Reals | Non
         omega = frequency_grid(loops, per_decade=per_decade, floor=floor)
     top, bottom = loops.parts(omega)
     with np.errstate(divide="ignore"):
-        log_gain = 0.5 * (np.log(top.real**2 + top.imag**2) - np.log(bottom.real**2 + bottom.imag**2))
-    past = np.angle(-(top * bottom.conj()))
+        top_size, bottom_size = np.abs(top), np.abs(bottom)
+        log_gain = np.log(top_size) - np.log(bottom_size)
+    past = np.angle(-_unit(top, top_size) * _unit(bottom, bottom_size).conj())
     delay = float(loops.delay.max(initial=0.0))
-    return Sweep(loops=loops, omega=omega, top=top, bottom=bottom, log_gain=log_gain, past=past,
-                 resolved=np.diff(omega) * delay < 4.0 * _TURN)
+    return Sweep(
+        loops=loops,
+        omega=omega,
+        top=top,
+        bottom=bottom,
+        log_gain=log_gain,
+        past=past,
+        resolved=np.diff(omega) * delay < 4.0 * _TURN,
+    )
+
+
+def _unit(z: NDArray[np.complex128], size: Reals) -> NDArray[np.complex128]:
+    """Give numbers their angle only: products of high powers of a frequency would overflow."""
+    return np.asarray(z / np.where(size > 0.0, size, 1.0), dtype=complex)
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -259,6 +281,7 @@ def unstable_roots(s: Sweep) -> NDArray[np.float64]:
     direct = np.abs(loops.direct())
     late = loops.delay > 0.0
     f = s.bottom + s.top
+    f = _unit(f, np.abs(f))
     step = np.angle(f[:, 1:] * f[:, :-1].conj())
 
     quiet = np.where(late, 0.5 * (1.0 + np.minimum(direct, 1.0)), -1.0)
@@ -277,10 +300,11 @@ def unstable_roots(s: Sweep) -> NDArray[np.float64]:
     turned = start + np.sum(np.where(counted, step, 0.0), axis=1)
 
     rows = np.arange(m)
-    d_step = np.angle(s.bottom[:, 1:] * s.bottom[:, :-1].conj())
+    d = _unit(s.bottom, np.abs(s.bottom))
+    d_step = np.angle(d[:, 1:] * d[:, :-1].conj())
     tail = np.sum(np.where(counted, 0.0, d_step), axis=1)
-    ahead = np.angle(d_coef[:, None][:, 0] * 1j**d_deg * s.bottom[:, -1].conj())
-    closed = np.angle((s.bottom + s.top)[rows, end] * s.bottom[rows, end].conj())
+    ahead = np.angle(d_coef[:, None][:, 0] * 1j**d_deg * d[:, -1].conj())
+    closed = np.angle(f[rows, end] * d[rows, end].conj())
     with_delay = turned - closed + tail + ahead
 
     degree = np.maximum(n_deg, d_deg)

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
+from functools import partial
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -84,8 +86,10 @@ def gain_range(
     order = np.lexsort((low, rows))
     rows, low, high, kind = rows[order], low[order], high[order], kind[order]
     found = GainRange(
-        low=np.full(m, np.nan), high=np.full(m, np.nan),
-        low_by=np.full(m, -1, dtype=np.int64), high_by=np.full(m, -1, dtype=np.int64),
+        low=np.full(m, np.nan),
+        high=np.full(m, np.nan),
+        low_by=np.full(m, -1, dtype=np.int64),
+        high_by=np.full(m, -1, dtype=np.int64),
     )
     gaps = [_gaps(low[rows == i], high[rows == i], kind[rows == i]) for i in range(m)]
     flat = [(i, g) for i, row in enumerate(gaps) for g in row]
@@ -96,9 +100,18 @@ def gain_range(
     # The tests of stability share one sweep: scaling N needs no new evaluation.
     gain = np.exp(middle)[:, None]
     picked = loops.scaled(gain, at)
-    tested = sweep(picked, per_decade=per_decade, floor=floor) if exact else Sweep(
-        loops=picked, omega=s.omega, top=s.top[at] * gain, bottom=s.bottom[at],
-        log_gain=s.log_gain[at] + middle[:, None], past=s.past[at], resolved=s.resolved,
+    tested = (
+        sweep(picked, per_decade=per_decade, floor=floor)
+        if exact
+        else Sweep(
+            loops=picked,
+            omega=s.omega,
+            top=s.top[at] * gain,
+            bottom=s.bottom[at],
+            log_gain=s.log_gain[at] + middle[:, None],
+            past=s.past[at],
+            resolved=s.resolved,
+        )
     )
     stable = unstable_roots(tested) < 0.5
     for (i, g), good in zip(flat, stable, strict=True):
@@ -148,9 +161,7 @@ def _phase_bars(s: Sweep, criteria: Criteria, exact: bool) -> Bars:
     inside = np.where(bad[row, k], k, k + 1)
     x = np.log(s.omega)
     if exact:
-        at = roots(
-            lambda z, i: np.abs(past_at(s.loops, np.exp(z), row[i])) - asked, x[k], x[k + 1]
-        )
+        at = roots(lambda z, i: np.abs(past_at(s.loops, np.exp(z), row[i])) - asked, x[k], x[k + 1])
         end = -np.log(np.abs(s.loops.response(np.exp(at), row)))
     else:
         share = short[row, k] / (short[row, k] - short[row, k + 1])
@@ -163,10 +174,7 @@ def _phase_bars(s: Sweep, criteria: Criteria, exact: bool) -> Bars:
             dip = bad[:, 1:-1] & (way * mid <= way * gain[:, :-2]) & (way * mid <= way * gain[:, 2:])
             row, k = np.nonzero(dip & np.isfinite(gain[:, :-2]) & np.isfinite(gain[:, 2:]))
             if row.size:
-                _, best = minima(
-                    lambda z, i, row=row, way=way: -way * np.log(np.abs(s.loops.response(np.exp(z), row[i]))),
-                    x[k], x[k + 2],
-                )
+                _, best = minima(partial(_log_size, s, row, way), x[k], x[k + 2])
                 parts.append((row, mid[row, k], way * best))
     parts += [(r, gain[r, k], to) for r, k, to in _outer(s, bad)]
     rows, low, high = (np.concatenate([p[j] for p in parts]) for j in range(3))
@@ -231,17 +239,23 @@ def _peak_bars(s: Sweep, criteria: Criteria, exact: bool) -> Bars:
             dip = (v[:, 1:-1] <= v[:, :-2]) & (v[:, 1:-1] <= v[:, 2:]) & hit[:, 1:-1]
             row, k = np.nonzero(dip)
             if row.size:
-                _, best = minima(lambda z, i, row=row, way=way: end(z, row[i], way), x[k], x[k + 2])
+                _, best = minima(partial(_at_rows, end, row, way), x[k], x[k + 2])
                 seen = value[row, k + 1]
                 best = way * np.minimum(best, way * seen)
                 parts.append((row, np.minimum(best, seen), np.maximum(best, seen)))
     direct = s.loops.direct()
     late = np.flatnonzero((s.loops.delay > 0.0) & (direct != 0.0))
-    parts.append((late, np.log((1.0 - 1.0 / criteria.max_sensitivity) / np.abs(direct[late])), np.full(late.size, _FAR)))
+    parts.append(
+        (
+            late,
+            np.log((1.0 - 1.0 / criteria.max_sensitivity) / np.abs(direct[late])),
+            np.full(late.size, _FAR),
+        )
+    )
     static = s.loops.static()
     flat = np.flatnonzero((static < 0.0) & np.isfinite(static))
-    for ends, k, to in _outer(s, hit):
-        parts.append((ends, np.minimum(low[ends, k], to), np.maximum(high[ends, k], to)))
+    for ends, column, to in _outer(s, hit):
+        parts.append((ends, np.minimum(low[ends, column], to), np.maximum(high[ends, column], to)))
     near = 1.0 / criteria.max_sensitivity
     parts.append((flat, np.log((1.0 - near) / -static[flat]), np.log((1.0 + near) / -static[flat])))
     rows, lo, hi = (np.concatenate([p[j] for p in parts]) for j in range(3))
@@ -254,3 +268,12 @@ def _touch(past: Reals, keep: float) -> tuple[Reals, Reals]:
     with np.errstate(invalid="ignore", divide="ignore"):
         root = np.sqrt(np.where(c > 0.0, c * c - keep, np.nan))
         return np.log(np.maximum(c - root, 1e-300)), np.log(c + root)
+
+
+def _log_size(s: Sweep, row: Rows, way: float, z: Reals, i: Rows) -> Reals:
+    """Give -way ln |L| at ln-frequencies z of the chosen rows."""
+    return np.asarray(-way * np.log(np.abs(s.loops.response(np.exp(z), row[i]))), dtype=float)
+
+
+def _at_rows(end: Callable[[Reals, Rows, float], Reals], row: Rows, way: float, z: Reals, i: Rows) -> Reals:
+    return end(z, row[i], way)

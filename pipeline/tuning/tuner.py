@@ -26,8 +26,8 @@ if TYPE_CHECKING:
     Reals = NDArray[np.float64]
 
 #: Grids of the search and of the final answer.
-_SEARCH = {"per_decade": 24, "floor": np.inf}
-_FINAL = {"per_decade": 80, "floor": 0.02}
+_SEARCH_GRID = (24, np.inf)
+_FINAL_GRID = (80, 0.02)
 #: A derivative time above a quarter of the integral time has no series equation, so no
 #: controller of that kind could be set to it.
 MOST_DERIVATIVE = 0.25
@@ -38,6 +38,14 @@ _UNSEEN = 0.1
 _OVERSHOOT_TOLERANCE = 0.005
 #: Gains tried downwards for the overshoot [share of the largest].
 _LADDER = np.geomspace(1.0, 0.03, 12)
+
+
+#: Said where a PID is better off as a PI.
+_NO_DERIVATIVE = Caution(
+    code="no-derivative",
+    level="note",
+    text="Derivative action brings nothing here under these criteria, so its time is zero.",
+)
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -52,7 +60,10 @@ class _Job:
     def shape(self, integral: float, derivative: float, gain: float = 1.0) -> Controller:
         """Give the controller with these times and this gain."""
         return replace(
-            self.pattern, gain=gain, integral_time=integral, derivative_time=derivative,
+            self.pattern,
+            gain=gain,
+            integral_time=integral,
+            derivative_time=derivative,
             derivative_filter=derivative / self.ratio,
         )
 
@@ -104,20 +115,48 @@ def tune(
     """
     held = replace(model, dead_time=max(model.dead_time, dead_time_floor))
     pattern = Controller(
-        kind=kind, gain=1.0, action=action_for_model(model),
-        setpoint_weight=setpoint_weight, derivative_setpoint_weight=derivative_setpoint_weight,
-        pv_filter=pv_filter, scan=scan, compute_delay=compute_delay,
+        kind=kind,
+        gain=1.0,
+        action=action_for_model(model),
+        setpoint_weight=setpoint_weight,
+        derivative_setpoint_weight=derivative_setpoint_weight,
+        pv_filter=pv_filter,
+        scan=scan,
+        compute_delay=compute_delay,
     )
+    found = _tuned(held, pattern, criteria, derivative_filter_ratio)
+    if kind != "PID" or (found.reached and found.binding != "overshoot"):
+        return found
+    # A derivative time of nothing is a PID's to choose: it must not end below the PI.
+    plain = _tuned(held, replace(pattern, kind="PI"), criteria, derivative_filter_ratio)
+    if plain.reached and (not found.reached or _integral_gain(plain) > _integral_gain(found)):
+        return replace(
+            plain, controller=replace(plain.controller, kind="PID"), remarks=(*plain.remarks, _NO_DERIVATIVE)
+        )
+    return found
+
+
+def _integral_gain(tuning: Tuning) -> float:
+    return tuning.controller.gain / tuning.controller.integral_time
+
+
+def _tuned(held: ProcessModel, pattern: Controller, criteria: Criteria, ratio: float) -> Tuning:
+    """Tune one kind of controller on one model."""
     remarks: list[Caution] = []
-    job = _Job(model=held, pattern=pattern, ratio=derivative_filter_ratio, scales=_time_scales(held, pattern))
+    job = _Job(model=held, pattern=pattern, ratio=ratio, scales=_time_scales(held, pattern))
     best = _search(job, criteria)
     if best is not None and not np.isfinite(best[2]):
         assumed = _UNSEEN * float(job.scales.min())
-        remarks.append(Caution(
-            code="no-gain-limit", level="stop", value=0.0, limit=assumed,
-            text=f"On this model no criterion ever limits the gain, which no real loop allows. The settings "
-            f"assume a dead time of {assumed:.3g} s; give the scan, the filter or a dead time to count on.",
-        ))
+        remarks.append(
+            Caution(
+                code="no-gain-limit",
+                level="stop",
+                value=0.0,
+                limit=assumed,
+                text=f"On this model no criterion ever limits the gain, which no real loop allows. The settings "
+                f"assume a dead time of {assumed:.3g} s; give the scan, the filter or a dead time to count on.",
+            )
+        )
         job = replace(job, model=replace(held, dead_time=assumed))
         best = _search(job, criteria)
     reached, asked = best is not None, criteria
@@ -156,8 +195,13 @@ def tune(
     if np.isfinite(low) and low > 0.0:
         remarks.append(_lower_limit(low, int(ends.low_by[0]), controller.gain))
     return Tuning(
-        model=job.model, controller=controller, margins=m, prediction=predict(job.model, controller), binding=binding,
-        reached=reached, remarks=tuple(remarks),
+        model=job.model,
+        controller=controller,
+        margins=m,
+        prediction=predict(job.model, controller),
+        binding=binding,
+        reached=reached,
+        remarks=tuple(remarks),
     )
 
 
@@ -173,12 +217,20 @@ def _time_scales(model: ProcessModel, pattern: Controller) -> Reals:
 
 def _evaluate(job: _Job, criteria: Criteria, integral: Reals, derivative: Reals) -> GainRange:
     shapes = [job.shape(float(i), float(d)) for i, d in zip(integral, derivative, strict=True)]
-    return gain_range(stack_loops([job.model], shapes), criteria, **_SEARCH)
+    return gain_range(
+        stack_loops([job.model], shapes), criteria, per_decade=_SEARCH_GRID[0], floor=_SEARCH_GRID[1]
+    )
 
 
 def _ends(job: _Job, near: Controller, criteria: Criteria) -> GainRange:
     """Give the exact range of gains for one shape, on a grid that suits a gain near the answer."""
-    r = gain_range(stack_loops([job.model], [near]), criteria, exact=True, **_FINAL)
+    r = gain_range(
+        stack_loops([job.model], [near]),
+        criteria,
+        exact=True,
+        per_decade=_FINAL_GRID[0],
+        floor=_FINAL_GRID[1],
+    )
     return replace(r, low=r.low * near.gain, high=r.high * near.gain)
 
 
@@ -266,9 +318,7 @@ def _best_share(job: _Job, criteria: Criteria) -> tuple[float, tuple[float, floa
     return low, best
 
 
-def _limit_overshoot(
-    job: _Job, criteria: Criteria, start: Controller, low: float
-) -> Controller | None:
+def _limit_overshoot(job: _Job, criteria: Criteria, start: Controller, low: float) -> Controller | None:
     """Give the fastest settings that also keep the overshoot; `start` itself if it does."""
     limit = criteria.overshoot
     assert limit is not None
@@ -280,7 +330,12 @@ def _limit_overshoot(
 
     def fastest(log_time: float) -> tuple[float, Controller | None]:
         time = float(np.exp(log_time))
-        r = gain_range(stack_loops([job.model], [job.shape(time, share * time)]), criteria, **_SEARCH)
+        r = gain_range(
+            stack_loops([job.model], [job.shape(time, share * time)]),
+            criteria,
+            per_decade=_SEARCH_GRID[0],
+            floor=_SEARCH_GRID[1],
+        )
         if not np.isfinite(r.high[0]):
             return -np.inf, None
         c = _gain_for_overshoot(
@@ -306,9 +361,7 @@ def _limit_overshoot(
     ends = _ends(job, best, criteria)
     if not np.isfinite(ends.high[0]):
         return None
-    return _gain_for_overshoot(
-        job.model, replace(best, gain=float(ends.high[0])), float(ends.low[0]), limit
-    )
+    return _gain_for_overshoot(job.model, replace(best, gain=float(ends.high[0])), float(ends.low[0]), limit)
 
 
 def _gain_for_overshoot(
@@ -332,12 +385,12 @@ def _gain_for_overshoot(
         above, over = below, value
     else:
         return None
-    return replace(top, gain=_meet(excess, below, value, above, over, 0.3 if coarse else _OVERSHOOT_TOLERANCE))
+    return replace(
+        top, gain=_meet(excess, below, value, above, over, 0.3 if coarse else _OVERSHOOT_TOLERANCE)
+    )
 
 
-def _meet(
-    f: Callable[[float], float], a: float, fa: float, b: float, fb: float, tolerance: float
-) -> float:
+def _meet(f: Callable[[float], float], a: float, fa: float, b: float, fb: float, tolerance: float) -> float:
     """Close in on f = 0 from below by false position with halving (Illinois)."""
     for _ in range(40):
         if -fa <= tolerance or abs(b - a) < 1e-9 * abs(b):
@@ -366,7 +419,10 @@ def _unreached(job: _Job, criteria: Criteria, pm: float, gm: float, ms: float) -
         cure = "Less dead time, another kind of controller, or a lower target would reach it."
     asked = criteria.phase_margin
     return Caution(
-        code="target-not-reached", level="care", value=pm, limit=asked,
+        code="target-not-reached",
+        level="care",
+        value=pm,
+        limit=asked,
         text=f"No settings of this controller keep every criterion. The best found reach a phase margin of "
         f"{pm:.1f} degrees, gain margin {gm:.2f}, Ms {ms:.2f}. {cure}",
     )
@@ -376,12 +432,17 @@ def _overshoot_remark(job: _Job, controller: Controller, limit: float) -> Cautio
     value = overshoot(job.model, controller)
     softer = overshoot(job.model, replace(controller, setpoint_weight=0.0))
     cure = (
-        f" With set-point weight 0 it is {softer:.1f} %." if np.isfinite(softer) and softer < value
-        and controller.kind in ("PI", "PID") else " Integral action would remove the offset it is measured from."
-        if controller.kind in ("P", "PD") else ""
+        f" With set-point weight 0 it is {softer:.1f} %."
+        if np.isfinite(softer) and softer < value and controller.kind in ("PI", "PID")
+        else " Integral action would remove the offset it is measured from."
+        if controller.kind in ("P", "PD")
+        else ""
     )
     return Caution(
-        code="overshoot-not-reached", level="care", value=value, limit=limit,
+        code="overshoot-not-reached",
+        level="care",
+        value=value,
+        limit=limit,
         text=f"No gain within the margins keeps the overshoot at {limit:.3g} %; here it is {value:.1f} %.{cure}",
     )
 
@@ -389,26 +450,40 @@ def _overshoot_remark(job: _Job, controller: Controller, limit: float) -> Cautio
 def _lower_limit(low: float, by: int, gain: float) -> Caution:
     if by == 0:
         return Caution(
-            code="two-gains", level="note", value=low, limit=gain,
-            text=f"A gain of {low:.4g} has the same phase margin as the upper end of this range, but rolls slowly; "
+            code="two-gains",
+            level="note",
+            value=low,
+            limit=gain,
+            text=f"A gain of {low:.4g} has the same phase margin as the upper end of this range but rolls; "
             "the fast branch is given. Turning the gain down does not make this loop safer.",
         )
     return Caution(
-        code="lower-gain-limit", level="note", value=low, limit=gain,
+        code="lower-gain-limit",
+        level="note",
+        value=low,
+        limit=gain,
         text=f"Below a gain of {low:.4g} this loop no longer keeps its criteria: it needs its gain.",
     )
 
 
 def _without_settings(job: _Job, remarks: list[Caution]) -> Tuning:
     """No gain of this kind of controller closes a stable loop: say so, with the gain at nothing."""
-    controller = job.shape(
-        1.0 if job.pattern.kind in ("I", "PI", "PID") else np.inf, 0.0, 1e-12
+    controller = job.shape(1.0 if job.pattern.kind in ("I", "PI", "PID") else np.inf, 0.0, 1e-12)
+    remarks.append(
+        Caution(
+            code="no-stabilising-gain",
+            level="stop",
+            value=None,
+            limit=None,
+            text=f"No gain of a {job.pattern.kind} controller makes this loop stable. Choose another kind.",
+        )
     )
-    remarks.append(Caution(
-        code="no-stabilising-gain", level="stop", value=None, limit=None,
-        text=f"No gain of a {job.pattern.kind} controller makes this loop stable. Choose another kind of controller.",
-    ))
     return Tuning(
-        model=job.model, controller=controller, margins=margins(job.model, controller), prediction=predict(job.model, controller),
-        binding="phase_margin", reached=False, remarks=tuple(remarks),
+        model=job.model,
+        controller=controller,
+        margins=margins(job.model, controller),
+        prediction=predict(job.model, controller),
+        binding="phase_margin",
+        reached=False,
+        remarks=tuple(remarks),
     )

@@ -3,18 +3,18 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import replace
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
 
 from pipeline.findings import Caution
 from pipeline.loop.batch_response import batch_overshoot, batch_setpoint
-from pipeline.loop.controller import feedback_path, setpoint_path
+from pipeline.loop.controller import feedback_path, product, setpoint_path
 from pipeline.loop.margins import MarginTable, margin_table, margins
 from pipeline.loop.metrics import final_value
 from pipeline.loop.simulate import predict
-from pipeline.loop.stack import LoopStack, stack_loops
+from pipeline.loop.stack import stack_loops
 from pipeline.tuning.types import BackedOff, Bands
 
 if TYPE_CHECKING:
@@ -36,6 +36,8 @@ _HORIZON = 3.0
 _FACTORS = np.geomspace(1.0, 0.1, 14)
 #: The factor is found to this [1].
 _FACTOR_TOLERANCE = 1e-3
+#: A gain is given up for at least so much phase margin at the percentile [degrees].
+_WORTH_SLOWING = 3.0
 
 
 def bands(models: Sequence[ProcessModel], controller: Controller) -> Bands:
@@ -59,7 +61,7 @@ def _bands(models: Sequence[ProcessModel], controller: Controller, table: Margin
     stable = np.flatnonzero(table.stable)
     over = np.full(len(models), np.inf)
     if stable.size:
-        kept = [models[i] for i in stable]
+        kept = [models[int(i)] for i in stable]
         middle = kept[int(np.argsort(table.phase_margin[stable])[stable.size // 2])]
         nominal = predict(middle, controller)
         end = float(nominal.setpoint.t[-1])
@@ -76,16 +78,16 @@ def _bands(models: Sequence[ProcessModel], controller: Controller, table: Margin
         max_sensitivity=_three(table.max_sensitivity),
         overshoot=_three(over),
         unstable_share=1.0 - stable.size / len(models),
-        t=_frozen(t), low=_frozen(low), high=_frozen(high),
+        t=_frozen(t),
+        low=_frozen(low),
+        high=_frozen(high),
     )
 
 
 def _final(model: ProcessModel, controller: Controller) -> float:
     num, den = model.numerator, model.denominator
     sp, fb = setpoint_path(controller), feedback_path(controller)
-    return final_value(
-        (np.polymul(sp[0], num), np.polymul(sp[1], den)), (np.polymul(fb[0], num), np.polymul(fb[1], den))
-    )
+    return final_value((product(sp[0], num), product(sp[1], den)), (product(fb[0], num), product(fb[1], den)))
 
 
 def _frozen(x: Reals) -> Reals:
@@ -100,10 +102,31 @@ def _three(x: Reals) -> tuple[float, float, float]:
     return a, b, c
 
 
-def _held(loops: LoopStack, factor: float, percentile: float) -> float:
-    """Give the phase margin at a percentile of the models, the gain multiplied by a factor."""
-    table = margin_table(loops.scaled(np.full(len(loops), factor)), sensitivity=False)
-    return float(np.percentile(table.phase_margin, percentile, method="inverted_cdf"))
+@dataclass(frozen=True, kw_only=True)
+class _Slower:
+    """The settings made slower by a factor, over all plausible models.
+
+    On an integrating process a lower gain alone lowers the phase margin: it rolls. There the
+    integral time grows as the gain falls, which stretches the loop's time and keeps its shape.
+    """
+
+    models: Sequence[ProcessModel]
+    controller: Controller
+    stretched: bool
+
+    def settings(self, factor: float) -> Controller:
+        c = self.controller
+        longer = c.integral_time / factor if self.stretched else c.integral_time
+        return replace(c, gain=c.gain * factor, integral_time=longer)
+
+    def table(self, factor: float, *, sensitivity: bool = True) -> MarginTable:
+        loops = stack_loops(self.models, [self.settings(factor)])
+        return margin_table(loops, sensitivity=sensitivity)
+
+    def held(self, factor: float, percentile: float) -> float:
+        """Give the phase margin at a percentile of the models."""
+        table = self.table(factor, sensitivity=False)
+        return float(np.percentile(table.phase_margin, percentile, method="inverted_cdf"))
 
 
 def back_off(tuning: Tuning, models: Sequence[ProcessModel], criteria: Criteria) -> BackedOff:
@@ -123,52 +146,73 @@ def back_off(tuning: Tuning, models: Sequence[ProcessModel], criteria: Criteria)
         percentile. `held` is False where no factor does, as on loops that need their gain;
         the factor is then the one that comes nearest, and a remark says so.
     """
-    loops = stack_loops(models, [tuning.controller])
+    stretched = tuning.model.integrators > 0 and tuning.controller.kind in ("PI", "PID")
+    slower = _Slower(models=models, controller=tuning.controller, stretched=stretched)
     asked = criteria.percentile_phase_margin
     factor, held = 1.0, True
     remarks: list[Caution] = []
     if asked is not None:
-        factor, held, best = _factor(loops, criteria.percentile, asked)
+        factor, held, best = _factor(slower, criteria.percentile, asked)
         if not held:
-            remarks.append(Caution(
-                code="back-off-not-enough", level="care", value=best, limit=asked,
-                text=f"No lower gain holds a phase margin of {asked:.3g} degrees at the {criteria.percentile:.3g}th "
-                f"percentile of the plausible models; the nearest, {best:.1f} degrees, is at {factor:.2f} of the gain. "
-                "A better test would narrow the models.",
-            ))
-    controller = replace(tuning.controller, gain=tuning.controller.gain * factor)
-    table = margin_table(loops.scaled(np.full(len(loops), factor)))
+            remarks.append(
+                Caution(
+                    code="back-off-not-enough",
+                    level="care",
+                    value=best,
+                    limit=asked,
+                    text=f"No lower gain holds {asked:.3g} degrees of phase margin at percentile {criteria.percentile:.3g} "
+                    f"of the plausible models; the nearest, {best:.1f} degrees, is at {factor:.2f} of the gain. "
+                    "A better test would narrow the models.",
+                )
+            )
+    if factor < 1.0 and stretched:
+        remarks.append(
+            Caution(
+                code="integral-time-lengthened",
+                level="note",
+                value=factor,
+                limit=None,
+                text=f"For uncertainty the gain was multiplied and the integral time divided by {factor:.2f}: "
+                "on an integrating process a lower gain alone would roll.",
+            )
+        )
+    controller = slower.settings(factor)
+    table = slower.table(factor)
     return BackedOff(
         controller=controller,
         margins=tuning.margins if factor == 1.0 else margins(tuning.model, controller),
         prediction=tuning.prediction if factor == 1.0 else predict(tuning.model, controller),
         bands=_bands(models, controller, table),
-        factor=factor, held=held, remarks=tuple(remarks),
+        factor=factor,
+        held=held,
+        remarks=tuple(remarks),
     )
 
 
-def _factor(loops: LoopStack, percentile: float, asked: float) -> tuple[float, bool, float]:
+def _factor(slower: _Slower, percentile: float, asked: float) -> tuple[float, bool, float]:
     """Give the largest factor that holds, whether one does, and the phase margin there."""
     above = 1.0
-    value = _held(loops, 1.0, percentile)
+    value = slower.held(1.0, percentile)
     if value >= asked:
         return 1.0, True, value
+    first = value
     best = (value, 1.0)
     over = value
     for x in _FACTORS[1:]:
-        value = _held(loops, float(x), percentile)
+        value = slower.held(float(x), percentile)
         if value >= asked:
             break
         if value > best[0]:
             best = (value, float(x))
         above, over = float(x), value
     else:
-        return best[1], False, best[0]
+        # nothing holds it: slow down only for a gain worth having
+        return (best[1], False, best[0]) if best[0] > first + _WORTH_SLOWING else (1.0, False, first)
     below, under = float(x), value
     while above - below > _FACTOR_TOLERANCE:
         guess = below + (above - below) * (under - asked) / max(under - over, 1e-12)
         guess = min(max(guess, below + 0.1 * (above - below)), above - 0.1 * (above - below))
-        value = _held(loops, guess, percentile)
+        value = slower.held(guess, percentile)
         if value >= asked:
             below, under = guess, value
             if value - asked < 0.02:

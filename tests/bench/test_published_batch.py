@@ -83,7 +83,7 @@ def test_pi_settings_keep_their_word_on_the_true_process(fits):
         table.append((abs(error), name, fit.structure, error, over))
     worst = sorted(table, reverse=True)[:6]
     print(
-        f"\nbelow by 2: {below}, away by 2: {away}, overshoot off by 2: {beyond}, unstable: {lost}, of {len(judged)}"
+        f"\nbelow by 2: {below}, away by 2: {away}, overshoot off: {beyond}, unstable: {lost}, of {len(judged)}"
     )
     print(
         *[f"  {n}: {s}, phase margin {e:+.2f} degrees, overshoot {o:+.1f} points" for _, n, s, e, o in worst],

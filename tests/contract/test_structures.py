@@ -94,7 +94,10 @@ def test_projected_slopes_are_what_the_search_needs(structure):
     model = structure.model(search, gains, 3.77)
     pv = sum(d * model.step_response(t - a) for a, d in zip(co_times[1:], np.diff(co_values), strict=True))
     problem = Problem(
-        BumpData(t=t, pv=pv, co_times=co_times, co_values=co_values), np.ones(t.size, bool), drift=True, settling=False
+        BumpData(t=t, pv=pv, co_times=co_times, co_values=co_values),
+        np.ones(t.size, bool),
+        drift=True,
+        settling=False,
     )
     residual, slopes = problem.project(structure, search, 3.77)
     assert np.abs(residual).max() < 1e-11

@@ -24,8 +24,14 @@ def loops(draw, dead=True):
     num = (draw(st.floats(-1.0, 1.0).map(lambda x: round(x, 2))), 1.0)
     model = ProcessModel(numerator=num, denominator=tuple(den), dead_time=draw(log) if dead else 0.0)
     td = 0.2 * draw(log)
-    c = Controller(kind="PID", gain=draw(log), action="reverse", integral_time=4.0 * draw(log),
-                   derivative_time=td, derivative_filter=0.1 * td)
+    c = Controller(
+        kind="PID",
+        gain=draw(log),
+        action="reverse",
+        integral_time=4.0 * draw(log),
+        derivative_time=td,
+        derivative_filter=0.1 * td,
+    )
     return model, c
 
 
@@ -75,14 +81,33 @@ def test_sensitivity_bounds_the_margins_and_both_domains_agree(loop):
 
 @settings(max_examples=200, deadline=None, derandomize=True)
 @given(
-    st.sampled_from(["standard", "series", "parallel"]), st.sampled_from(["gain", "band"]),
+    st.sampled_from(["standard", "series", "parallel"]),
+    st.sampled_from(["gain", "band"]),
     st.sampled_from(["span", "engineering"]),
-    st.sampled_from(["seconds per repeat", "minutes per repeat", "repeats per minute", "repeats per second",
-                     "gain per second", "gain per minute"]),
-    st.sampled_from(["seconds", "minutes", "gain in seconds", "gain in minutes"]), log, log, st.floats(0.01, 0.249),
+    st.sampled_from(
+        [
+            "seconds per repeat",
+            "minutes per repeat",
+            "repeats per minute",
+            "repeats per second",
+            "gain per second",
+            "gain per minute",
+        ]
+    ),
+    st.sampled_from(["seconds", "minutes", "gain in seconds", "gain in minutes"]),
+    log,
+    log,
+    st.floats(0.01, 0.249),
 )
 def test_entry_comes_back_the_same(equation, proportional, basis, integral, derivative, gain, ti, share):
-    entry = Entry(equation=equation, proportional=proportional, proportional_basis=basis, integral=integral,
-                  derivative=derivative, pv_span=250.0, co_span=100.0)
+    entry = Entry(
+        equation=equation,
+        proportional=proportional,
+        proportional_basis=basis,
+        integral=integral,
+        derivative=derivative,
+        pv_span=250.0,
+        co_span=100.0,
+    )
     c = Controller(kind="PID", gain=gain, action="reverse", integral_time=ti, derivative_time=share * ti)
     assert understand(enter(c, entry), entry) == pytest.approx((gain, ti, share * ti), rel=1e-9)

@@ -31,7 +31,9 @@ def series(c):
     if "ki" in c:
         return Controller(kind="I", gain=c["ki"], action="reverse", integral_time=1.0)
     k, ti, td = from_series(c["Kc"], c["tauI"], c["tauD"])
-    return Controller(kind="PID" if td else "PI", gain=k, action="reverse", integral_time=ti, derivative_time=td)
+    return Controller(
+        kind="PID" if td else "PI", gain=k, action="reverse", integral_time=ti, derivative_time=td
+    )
 
 
 @pytest.mark.parametrize("row", TABLES["simc"]["rows"], ids=lambda r: r["id"])
@@ -61,7 +63,12 @@ def test_pole_cancelling_pi_has_closed_form_margins(row, ratio):
 @pytest.mark.parametrize("row", TABLES["unstable_lag"]["rows"], ids=lambda r: f"L/T={r['L_over_T']}")
 def test_best_phase_margin_of_a_runaway_lag_is_found_and_said(row):
     model = ProcessModel(numerator=(1.0,), denominator=(1.0, -1.0), dead_time=row["L_over_T"])
-    for k, good in ((row["KKc_max"] * 0.999, True), (row["KKc_max"] * 1.001, False), (0.999, False), (1.001, True)):
+    for k, good in (
+        (row["KKc_max"] * 0.999, True),
+        (row["KKc_max"] * 1.001, False),
+        (0.999, False),
+        (1.001, True),
+    ):
         c = Controller(kind="P", gain=k, action="reverse")
         assert margins(model, c).stable is good and stable_in_time(model, c) is good
     t = tune(model, kind="P", criteria=Criteria(gain_margin=None, max_sensitivity=None, overshoot=None))
@@ -73,8 +80,10 @@ def test_best_phase_margin_of_a_runaway_lag_is_found_and_said(row):
 def test_unstable_plant_with_pi_has_margins_both_ways():
     # Skogestad and Postlethwaite (2005), Ex. 2.5: 18.7, 0.21, 59.5, 1.19, 1.38 (to the digits printed).
     den = np.polymul([1.0, -1.0], np.polymul([0.02, 1.0], [0.02, 1.0]))
-    m = margins(ProcessModel(numerator=(4.0,), denominator=tuple(den)),
-                Controller(kind="PI", gain=1.25, action="reverse", integral_time=1.5))
+    m = margins(
+        ProcessModel(numerator=(4.0,), denominator=tuple(den)),
+        Controller(kind="PI", gain=1.25, action="reverse", integral_time=1.5),
+    )
     assert m.gain_margin == pytest.approx(18.7, abs=0.05)
     assert m.gain_reduction_margin == pytest.approx(0.21, abs=0.005)
     assert m.phase_margin == pytest.approx(59.5, abs=0.05)

@@ -59,7 +59,9 @@ CLASSES = {
     "second order": ProcessModel(numerator=(2,), denominator=(100.0, 5.0, 1.0), dead_time=5.0),
     "integrator": ProcessModel(numerator=(0.1,), denominator=(1.0, 0.0), dead_time=5.0),
     "integrator with lag": ProcessModel(numerator=(0.1,), denominator=(10.0, 1.0, 0.0), dead_time=5.0),
-    "integrator with inverse response": ProcessModel(numerator=(-1.0, 0.1), denominator=(3.0, 1.0, 0.0), dead_time=1.0),
+    "integrator with inverse response": ProcessModel(
+        numerator=(-1.0, 0.1), denominator=(3.0, 1.0, 0.0), dead_time=1.0
+    ),
     "second order with zero": ProcessModel(
         numerator=(-20.0, 2.0), denominator=(200.0, 30.0, 1.0), dead_time=1.0
     ),

@@ -20,17 +20,28 @@ def test_printed_pairs():
 
 def test_band_repeats_and_spans():
     c = Controller(kind="PI", gain=0.5, action="reverse", integral_time=60.0)
-    entry = Entry(proportional="band", proportional_basis="span", integral="repeats per minute",
-                  pv_span=200.0, co_span=100.0)
+    entry = Entry(
+        proportional="band",
+        proportional_basis="span",
+        integral="repeats per minute",
+        pv_span=200.0,
+        co_span=100.0,
+    )
     e = enter(c, entry)
     assert (e.proportional, e.integral, e.derivative) == (pytest.approx(100.0), pytest.approx(1.0), None)
     with pytest.raises(UsageError, match="range"):
         enter(c, Entry(proportional_basis="span"))
 
 
-@pytest.mark.parametrize(("num", "den", "words"), [
-    (1.0, (5.0, 1.0), "fall"), (-1.0, (5.0, 1.0), "rise"), (1.0, (5.0, -1.0), "fall"), (-1.0, (1.0, 0.0), "rise"),
-])
+@pytest.mark.parametrize(
+    ("num", "den", "words"),
+    [
+        (1.0, (5.0, 1.0), "fall"),
+        (-1.0, (5.0, 1.0), "rise"),
+        (1.0, (5.0, -1.0), "fall"),
+        (-1.0, (1.0, 0.0), "rise"),
+    ],
+)
 def test_action_in_words(num, den, words):
     action = action_for_model(ProcessModel(numerator=(num,), denominator=den))
     assert action_in_words(action) == f"PV rises: the output must {words}."

@@ -41,11 +41,13 @@ def simulate(model, c, *, horizon, n, load=False):
     def slope(x, s, u):
         pv = cc @ x + d * u
         f = s[1] if taus[0] > 0 else pv
-        return a @ x + b * u, np.array([
-            r - f,
-            (pv - s[1]) / taus[0] if taus[0] > 0 else 0.0,
-            (c.derivative_setpoint_weight * r - f - s[2]) / taus[1] if taus[1] > 0 else 0.0,
-        ])
+        return a @ x + b * u, np.array(
+            [
+                r - f,
+                (pv - s[1]) / taus[0] if taus[0] > 0 else 0.0,
+                (c.derivative_setpoint_weight * r - f - s[2]) / taus[1] if taus[1] > 0 else 0.0,
+            ]
+        )
 
     x, s = np.zeros(nx), np.zeros(3)
     co, pv = np.zeros(n + 1), np.zeros(n + 1)
@@ -72,17 +74,40 @@ def simulate(model, c, *, horizon, n, load=False):
 
 
 CASES = [
-    (ProcessModel(numerator=(1.0,), denominator=(10.0, 1.0), dead_time=1.0),
-     Controller(kind="PI", gain=7.0, action="reverse", integral_time=10.0), 40.0),
-    (ProcessModel(numerator=(-2.0,), denominator=(1.0, 0.0), dead_time=1.0),
-     Controller(kind="PI", gain=0.25, action="direct", integral_time=8.0), 40.0),
-    (ProcessModel(numerator=(-1.0, 1.0), denominator=(4.0, 4.0, 1.0), dead_time=0.5),
-     Controller(kind="PID", gain=1.0, action="reverse", integral_time=4.0, derivative_time=0.8,
-                derivative_filter=0.16, pv_filter=0.2, setpoint_weight=0.5), 30.0),
-    (ProcessModel(numerator=(1.0,), denominator=(5.0, -1.0), dead_time=1.0),
-     Controller(kind="PI", gain=2.2, action="reverse", integral_time=25.0), 50.0),
-    (ProcessModel(numerator=(1.0,), denominator=(1.0, 0.4, 1.0), dead_time=1.0),
-     Controller(kind="P", gain=0.3, action="reverse"), 30.0),
+    (
+        ProcessModel(numerator=(1.0,), denominator=(10.0, 1.0), dead_time=1.0),
+        Controller(kind="PI", gain=7.0, action="reverse", integral_time=10.0),
+        40.0,
+    ),
+    (
+        ProcessModel(numerator=(-2.0,), denominator=(1.0, 0.0), dead_time=1.0),
+        Controller(kind="PI", gain=0.25, action="direct", integral_time=8.0),
+        40.0,
+    ),
+    (
+        ProcessModel(numerator=(-1.0, 1.0), denominator=(4.0, 4.0, 1.0), dead_time=0.5),
+        Controller(
+            kind="PID",
+            gain=1.0,
+            action="reverse",
+            integral_time=4.0,
+            derivative_time=0.8,
+            derivative_filter=0.16,
+            pv_filter=0.2,
+            setpoint_weight=0.5,
+        ),
+        30.0,
+    ),
+    (
+        ProcessModel(numerator=(1.0,), denominator=(5.0, -1.0), dead_time=1.0),
+        Controller(kind="PI", gain=2.2, action="reverse", integral_time=25.0),
+        50.0,
+    ),
+    (
+        ProcessModel(numerator=(1.0,), denominator=(1.0, 0.4, 1.0), dead_time=1.0),
+        Controller(kind="P", gain=0.3, action="reverse"),
+        30.0,
+    ),
 ]
 
 
@@ -119,8 +144,11 @@ def test_sixty_degrees_is_near_ten_percent_on_integrating_loops(lags):
     model = ProcessModel(numerator=(1.0,), denominator=tuple(den))
     over = {}
     for angle in (50.0, 60.0, 70.0):
-        t = tune(model, kind="P", criteria=Criteria(phase_margin=angle, gain_margin=None,
-                                                  max_sensitivity=None, overshoot=None))
+        t = tune(
+            model,
+            kind="P",
+            criteria=Criteria(phase_margin=angle, gain_margin=None, max_sensitivity=None, overshoot=None),
+        )
         over[angle] = t.prediction.overshoot
     assert over[70.0] < 4.0 and 5.0 < over[60.0] < 12.0 and 15.0 < over[50.0] < 25.0
 
