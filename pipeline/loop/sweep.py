@@ -30,6 +30,8 @@ _SCALE_ROWS = 12
 _NEAR = 0.5
 #: Phase steps of D + N larger than this are subdivided when windings are counted [rad].
 _CLOSE = 1.0
+#: Polynomials above this at the end of the grid are taken by their angles: high powers of a frequency.
+_HUGE = 1e120
 #: A phase read from rounding alone is no crossing [rad].
 _ROUNDING = 1e-11
 
@@ -167,9 +169,8 @@ def sweep(loops: LoopStack, *, per_decade: int, floor: float, omega: Reals | Non
         omega = frequency_grid(loops, per_decade=per_decade, floor=floor)
     top, bottom = loops.parts(omega)
     with np.errstate(divide="ignore"):
-        top_size, bottom_size = np.abs(top), np.abs(bottom)
-        log_gain = np.log(top_size) - np.log(bottom_size)
-    past = np.angle(-_unit(top, top_size) * _unit(bottom, bottom_size).conj())
+        log_gain = np.log(np.abs(top)) - np.log(np.abs(bottom))
+    past = np.angle(-_moderate(top) * _moderate(bottom).conj())
     delay = float(loops.delay.max(initial=0.0))
     return Sweep(
         loops=loops,
@@ -182,8 +183,11 @@ def sweep(loops: LoopStack, *, per_decade: int, floor: float, omega: Reals | Non
     )
 
 
-def _unit(z: NDArray[np.complex128], size: Reals) -> NDArray[np.complex128]:
-    """Give numbers their angle only: products of high powers of a frequency would overflow."""
+def _moderate(z: NDArray[np.complex128]) -> NDArray[np.complex128]:
+    """Give numbers whose products cannot overflow: their angles alone where they grow huge."""
+    if z.size == 0 or float(np.max(np.abs(z[..., -1]))) < _HUGE:
+        return z
+    size = np.abs(z)
     return np.asarray(z / np.where(size > 0.0, size, 1.0), dtype=complex)
 
 
@@ -281,7 +285,7 @@ def unstable_roots(s: Sweep) -> NDArray[np.float64]:
     direct = np.abs(loops.direct())
     late = loops.delay > 0.0
     f = s.bottom + s.top
-    f = _unit(f, np.abs(f))
+    f = _moderate(f)
     step = np.angle(f[:, 1:] * f[:, :-1].conj())
 
     quiet = np.where(late, 0.5 * (1.0 + np.minimum(direct, 1.0)), -1.0)
@@ -300,7 +304,7 @@ def unstable_roots(s: Sweep) -> NDArray[np.float64]:
     turned = start + np.sum(np.where(counted, step, 0.0), axis=1)
 
     rows = np.arange(m)
-    d = _unit(s.bottom, np.abs(s.bottom))
+    d = _moderate(s.bottom)
     d_step = np.angle(d[:, 1:] * d[:, :-1].conj())
     tail = np.sum(np.where(counted, 0.0, d_step), axis=1)
     ahead = np.angle(d_coef[:, None][:, 0] * 1j**d_deg * d[:, -1].conj())

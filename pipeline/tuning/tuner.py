@@ -125,7 +125,7 @@ def tune(
         compute_delay=compute_delay,
     )
     found = _tuned(held, pattern, criteria, derivative_filter_ratio)
-    if kind != "PID" or (found.reached and found.binding != "overshoot"):
+    if kind != "PID":
         return found
     # A derivative time of nothing is a PID's to choose: it must not end below the PI.
     plain = _tuned(held, replace(pattern, kind="PI"), criteria, derivative_filter_ratio)

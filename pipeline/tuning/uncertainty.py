@@ -160,7 +160,7 @@ def back_off(tuning: Tuning, models: Sequence[ProcessModel], criteria: Criteria)
                     level="care",
                     value=best,
                     limit=asked,
-                    text=f"No lower gain holds {asked:.3g} degrees of phase margin at percentile {criteria.percentile:.3g} "
+                    text=f"No lower gain holds {asked:.3g} degrees of phase margin at the asked percentile "
                     f"of the plausible models; the nearest, {best:.1f} degrees, is at {factor:.2f} of the gain. "
                     "A better test would narrow the models.",
                 )
