@@ -75,7 +75,13 @@ def is_number(cell: str) -> bool:
 
 
 def split_cells(line: str, delimiter: str) -> list[str]:
-    """Take a line apart, quotation marks respected, cells stripped."""
+    """Take a line apart, quotation marks respected, cells stripped.
+
+    Parameters
+    ----------
+    line : str
+    delimiter : str
+    """
     if delimiter == " ":
         return line.split()
     if '"' in line:

@@ -157,7 +157,13 @@ def predict(model: ProcessModel, controller: Controller) -> Prediction:
 
 
 def overshoot(model: ProcessModel, controller: Controller) -> float:
-    """Give only the overshoot of `predict` [%], several times faster."""
+    """Give only the overshoot of `predict` [%], several times faster.
+
+    Parameters
+    ----------
+    model : ProcessModel
+    controller : Controller
+    """
     plan = _plan(model, controller)
     to_sp = _ratio(model, setpoint_path(controller))
     sp = closed_loop(plan.loop, to_sp, delay=plan.delay, h=plan.h).run(plan.n)

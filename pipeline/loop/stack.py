@@ -67,12 +67,27 @@ class LoopStack:
         return top, _at_j(den, omega)
 
     def response(self, omega: Reals, rows: Rows | None = None) -> NDArray[np.complex128]:
-        """Give L(j omega); arguments as in `parts`."""
+        """Give L(j omega).
+
+        Parameters
+        ----------
+        omega : (n,) ndarray
+            Frequencies [rad/s].
+        rows : (n,) ndarray of int, optional
+            Row each frequency belongs to; all of them for each row if left out.
+        """
         top, bottom = self.parts(omega, rows)
         return np.asarray(top / bottom, dtype=complex)
 
     def scaled(self, gain: Reals, rows: Rows | None = None) -> LoopStack:
-        """Give chosen rows with their loop gain multiplied."""
+        """Give chosen rows with their loop gain multiplied.
+
+        Parameters
+        ----------
+        gain : (m,) ndarray
+            Factor for each row [1].
+        rows : (m,) ndarray of int, optional
+        """
         pick = slice(None) if rows is None else rows
         return LoopStack(
             numerator=self.numerator[pick] * np.asarray(gain).reshape(-1, 1),

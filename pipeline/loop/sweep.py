@@ -202,12 +202,28 @@ class Crossings:
 
 
 def log_gain_at(loops: LoopStack, omega: Reals, rows: Rows) -> Reals:
-    """Give ln |L| at one frequency a row."""
+    """Give ln |L| at one frequency a row.
+
+    Parameters
+    ----------
+    loops : LoopStack
+    omega : (n,) ndarray
+        [rad/s].
+    rows : (n,) ndarray of int
+    """
     return np.asarray(np.log(np.abs(loops.response(omega, rows))), dtype=float)
 
 
 def past_at(loops: LoopStack, omega: Reals, rows: Rows) -> Reals:
-    """Give the phase beyond -180 degrees, in (-pi, pi], at one frequency a row [rad]."""
+    """Give the phase beyond -180 degrees, in (-pi, pi], at one frequency a row [rad].
+
+    Parameters
+    ----------
+    loops : LoopStack
+    omega : (n,) ndarray
+        [rad/s].
+    rows : (n,) ndarray of int
+    """
     return np.asarray(np.angle(-loops.response(omega, rows)), dtype=float)
 
 

@@ -95,7 +95,13 @@ def _scalar(value: Any) -> str:
 
 
 def write_record(record: Record, path: Path) -> None:
-    """Write a record so that the file is there whole or not at all."""
+    """Write a record so that the file is there whole or not at all.
+
+    Parameters
+    ----------
+    record : Record
+    path : Path
+    """
     write_whole(to_json(record).encode(), path)
 
 

@@ -76,6 +76,12 @@ def svg(name: str, record: Record) -> str:
     """Draw one figure as an SVG element, the same text each time.
 
     Text stays text in the font of whatever holds the element; ids are unique to the figure.
+
+    Parameters
+    ----------
+    name : str
+        Key of `FIGURES`.
+    record : Record
     """
     buffer = io.StringIO()
     with matplotlib.rc_context({"svg.hashsalt": name, "svg.fonttype": "none"}):

@@ -118,7 +118,14 @@ def reading_text(log: Log, bumps: tuple[Bump, ...], quality: Quality) -> str:
 
 
 def reading_data(log: Log, bumps: tuple[Bump, ...], quality: Quality) -> dict[str, Any]:
-    """Give the same as plain values for a program: times in s, keys as in the record."""
+    """Give the same as plain values for a program: times in s, keys as in the record.
+
+    Parameters
+    ----------
+    log : Log
+    bumps : tuple of Bump
+    quality : Quality
+    """
     return {
         "log": {
             "file": log.file,

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
@@ -14,7 +13,9 @@ from pipeline.loop.margins import margins
 from pipeline.loop.simulate import overshoot, predict
 from pipeline.loop.stack import stack_loops
 from pipeline.loop.types import Controller
+from pipeline.tuning import remarks as remark
 from pipeline.tuning.criteria import NAMES, GainRange, gain_range
+from pipeline.tuning.overshoot import OVERSHOOT_TOLERANCE, gain_for_overshoot
 from pipeline.tuning.types import Criteria, Tuning
 
 if TYPE_CHECKING:
@@ -34,18 +35,6 @@ MOST_DERIVATIVE = 0.25
 #: Stand-in dead time where nothing limits the gain [share of the fastest lag]: less than
 #: this a bump test does not show.
 _UNSEEN = 0.1
-#: Overshoot is met to this [%].
-_OVERSHOOT_TOLERANCE = 0.005
-#: Gains tried downwards for the overshoot [share of the largest].
-_LADDER = np.geomspace(1.0, 0.03, 12)
-
-
-#: Said where a PID is better off as a PI.
-_NO_DERIVATIVE = Caution(
-    code="no-derivative",
-    level="note",
-    text="Derivative action brings nothing here under these criteria, so its time is zero.",
-)
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -131,7 +120,9 @@ def tune(
     plain = _tuned(held, replace(pattern, kind="PI"), criteria, derivative_filter_ratio)
     if plain.reached and (not found.reached or _integral_gain(plain) > _integral_gain(found)):
         return replace(
-            plain, controller=replace(plain.controller, kind="PID"), remarks=(*plain.remarks, _NO_DERIVATIVE)
+            plain,
+            controller=replace(plain.controller, kind="PID"),
+            remarks=(*plain.remarks, remark.NO_DERIVATIVE),
         )
     return found
 
@@ -179,7 +170,7 @@ def _tuned(held: ProcessModel, pattern: Controller, criteria: Criteria, ratio: f
         limited = _limit_overshoot(job, criteria, controller, low)
         if limited is None:
             reached = False
-            remarks.append(_overshoot_remark(job, controller, criteria.overshoot))
+            remarks.append(remark.overshoot_above(job.model, controller, criteria.overshoot))
         elif limited is not controller:
             controller, binding = limited, "overshoot"
             ends = _ends(job, controller, asked)
@@ -188,12 +179,16 @@ def _tuned(held: ProcessModel, pattern: Controller, criteria: Criteria, ratio: f
                 # A longer integral time brought the overshoot down; there a margin binds again.
                 binding = NAMES[int(ends.high_by[0])]
     elif criteria.overshoot is not None and overshoot(job.model, controller) > criteria.overshoot:
-        remarks.append(_overshoot_remark(job, controller, criteria.overshoot))
+        remarks.append(remark.overshoot_above(job.model, controller, criteria.overshoot))
     m = margins(job.model, controller)
     if share < 1.0:
-        remarks.append(_unreached(job, criteria, m.phase_margin, m.gain_margin, m.max_sensitivity))
+        remarks.append(
+            remark.unreached(
+                job.model, job.pattern.kind, criteria, m.phase_margin, m.gain_margin, m.max_sensitivity
+            )
+        )
     if np.isfinite(low) and low > 0.0:
-        remarks.append(_lower_limit(low, int(ends.low_by[0]), controller.gain))
+        remarks.append(remark.lower_end(low, int(ends.low_by[0]), controller.gain))
     return Tuning(
         model=job.model,
         controller=controller,
@@ -322,10 +317,10 @@ def _limit_overshoot(job: _Job, criteria: Criteria, start: Controller, low: floa
     """Give the fastest settings that also keep the overshoot; `start` itself if it does."""
     limit = criteria.overshoot
     assert limit is not None
-    if overshoot(job.model, start) <= limit + _OVERSHOOT_TOLERANCE:
+    if overshoot(job.model, start) <= limit + OVERSHOOT_TOLERANCE:
         return start
     if job.pattern.kind not in ("PI", "PID"):
-        return _gain_for_overshoot(job.model, start, low, limit)
+        return gain_for_overshoot(job.model, start, low, limit)
     share = start.derivative_time / start.integral_time
 
     def fastest(log_time: float) -> tuple[float, Controller | None]:
@@ -338,7 +333,7 @@ def _limit_overshoot(job: _Job, criteria: Criteria, start: Controller, low: floa
         )
         if not np.isfinite(r.high[0]):
             return -np.inf, None
-        c = _gain_for_overshoot(
+        c = gain_for_overshoot(
             job.model, job.shape(time, share * time, float(r.high[0])), float(r.low[0]), limit, coarse=True
         )
         return (-np.inf, None) if c is None else (c.gain / time, c)
@@ -361,109 +356,7 @@ def _limit_overshoot(job: _Job, criteria: Criteria, start: Controller, low: floa
     ends = _ends(job, best, criteria)
     if not np.isfinite(ends.high[0]):
         return None
-    return _gain_for_overshoot(job.model, replace(best, gain=float(ends.high[0])), float(ends.low[0]), limit)
-
-
-def _gain_for_overshoot(
-    model: ProcessModel, top: Controller, low: float, limit: float, *, coarse: bool = False
-) -> Controller | None:
-    """Give the largest gain from the top down at which the overshoot is within the limit."""
-
-    def excess(gain: float) -> float:
-        return overshoot(model, replace(top, gain=gain)) - limit
-
-    above, over = top.gain, excess(top.gain)
-    if over <= 0.0:
-        return top
-    for share in _LADDER[1:]:
-        below = top.gain * float(share)
-        if below < low:
-            return None
-        value = excess(below)
-        if value <= 0.0:
-            break
-        above, over = below, value
-    else:
-        return None
-    return replace(
-        top, gain=_meet(excess, below, value, above, over, 0.3 if coarse else _OVERSHOOT_TOLERANCE)
-    )
-
-
-def _meet(f: Callable[[float], float], a: float, fa: float, b: float, fb: float, tolerance: float) -> float:
-    """Close in on f = 0 from below by false position with halving (Illinois)."""
-    for _ in range(40):
-        if -fa <= tolerance or abs(b - a) < 1e-9 * abs(b):
-            break
-        x = (a * fb - b * fa) / (fb - fa)
-        # Aim a little low: the answer must keep the limit.
-        x = min(max(x, min(a, b) + 0.02 * abs(b - a)), max(a, b) - 0.02 * abs(b - a))
-        fx = f(x)
-        if fx <= 0.0:
-            a, fa = x, fx
-            fb *= 0.5
-        else:
-            b, fb = x, fx
-    return a
-
-
-def _unreached(job: _Job, criteria: Criteria, pm: float, gm: float, ms: float) -> Caution:
-    model = job.model
-    if model.unstable_poles.size:
-        cure = "The process runs away by itself: less dead time, or derivative action, would raise it."
-    elif model.integrators >= 2 and job.pattern.kind in ("P", "I", "PI"):
-        cure = "A process that integrates twice needs derivative action."
-    elif job.pattern.kind == "I" and model.integrators:
-        cure = "A process that integrates needs proportional action."
-    else:
-        cure = "Less dead time, another kind of controller, or a lower target would reach it."
-    asked = criteria.phase_margin
-    return Caution(
-        code="target-not-reached",
-        level="care",
-        value=pm,
-        limit=asked,
-        text=f"No settings of this controller keep every criterion. The best found reach a phase margin of "
-        f"{pm:.1f} degrees, gain margin {gm:.2f}, Ms {ms:.2f}. {cure}",
-    )
-
-
-def _overshoot_remark(job: _Job, controller: Controller, limit: float) -> Caution:
-    value = overshoot(job.model, controller)
-    softer = overshoot(job.model, replace(controller, setpoint_weight=0.0))
-    cure = (
-        f" With set-point weight 0 it is {softer:.1f} %."
-        if np.isfinite(softer) and softer < value and controller.kind in ("PI", "PID")
-        else " Integral action would remove the offset it is measured from."
-        if controller.kind in ("P", "PD")
-        else ""
-    )
-    return Caution(
-        code="overshoot-not-reached",
-        level="care",
-        value=value,
-        limit=limit,
-        text=f"No gain within the margins keeps the overshoot at {limit:.3g} %; here it is {value:.1f} %.{cure}",
-    )
-
-
-def _lower_limit(low: float, by: int, gain: float) -> Caution:
-    if by == 0:
-        return Caution(
-            code="two-gains",
-            level="note",
-            value=low,
-            limit=gain,
-            text=f"A gain of {low:.4g} has the same phase margin as the upper end of this range but rolls; "
-            "the fast branch is given. Turning the gain down does not make this loop safer.",
-        )
-    return Caution(
-        code="lower-gain-limit",
-        level="note",
-        value=low,
-        limit=gain,
-        text=f"Below a gain of {low:.4g} this loop no longer keeps its criteria: it needs its gain.",
-    )
+    return gain_for_overshoot(job.model, replace(best, gain=float(ends.high[0])), float(ends.low[0]), limit)
 
 
 def _without_settings(job: _Job, remarks: list[Caution]) -> Tuning:

@@ -12,7 +12,7 @@ from fitters.fit import BumpData
 TESTABLE = [demo for demo in BY_HAND if demo.name != "sump_level_refused"]
 STRUCTURES = {
     "sump_level": "integrator",
-    "boiler_drum_level": "integrator with zero",
+    "boiler_drum_level": "integrator with inverse response",
     "spawn_conveyor_speed": "second order",
 }
 
