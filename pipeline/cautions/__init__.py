@@ -30,6 +30,8 @@ RULES: tuple[Callable[[Facts], Caution | None], ...] = (
     settings.no_integral_action,
     settings.lower_limit,
     settings.criteria_not_met,
+    settings.output_kick,
+    settings.noisy_output,
     process.dead_time_floored,
     process.coarse_clock,
     process.lag_or_integrator,

@@ -17,6 +17,12 @@ _GAIN_MARGIN_EDGE = 2.0
 _SENSITIVITY_EDGE = 2.5
 #: Share of plausible loops lost above which no settings are given [1].
 _UNSTABLE_STOP = 0.05
+#: An output moved by more than this share of its range at once meets its limits (common practice) [1].
+_KICK = 0.5
+#: An output shaken by more than this share of its range wears its final element (common practice: 1 to 2 %) [1].
+_SHAKE = 0.015
+#: A signal in percent spans this much where no range is given [%].
+_PERCENT_SPAN = 100.0
 
 
 def action_differs(facts: Facts) -> Caution | None:
@@ -146,4 +152,42 @@ def scan_counted(facts: Facts) -> Caution | None:
         text=f"The margins include the controller's scan, compute delay and PV filter: together about "
         f"{cost:.1f} degrees of phase margin.",
         value=cost,
+    )
+
+
+def output_kick(facts: Facts) -> Caution | None:
+    """Say that a step as large as the test's would drive the output to its limits."""
+    span = facts.sheet.co.span or (_PERCENT_SPAN if facts.log.co_column.unit == "%" else None)
+    if facts.backed_off is None or facts.choice is None or span is None:
+        return None
+    step = float(np.ptp(facts.choice.best.fitted))
+    kick = facts.backed_off.prediction.co_peak * step / span
+    if kick <= _KICK:
+        return None
+    return Caution(
+        code="output-kick",
+        level="care",
+        text=f"A set-point step as large as the PV moved in this test would kick the output by {100 * kick:.0f} % "
+        "of its range: it will saturate, and the real overshoot will differ. Take smaller steps, or ramp the "
+        "set point.",
+        value=kick,
+        limit=_KICK,
+    )
+
+
+def noisy_output(facts: Facts) -> Caution | None:
+    """Say that the PV's noise would shake the final element."""
+    span = facts.sheet.co.span or (_PERCENT_SPAN if facts.log.co_column.unit == "%" else None)
+    if facts.backed_off is None or facts.choice is None or span is None:
+        return None
+    shake = facts.backed_off.prediction.noise_gain * facts.choice.best.noise_sd / span
+    if shake <= _SHAKE:
+        return None
+    return Caution(
+        code="noisy-output",
+        level="care",
+        text=f"The PV's noise would shake the output by about {100 * shake:.1f} % of its range (one standard "
+        "deviation). Use a lower gain, or a PV filter of no more than a fifth of the dead time.",
+        value=shake,
+        limit=_SHAKE,
     )

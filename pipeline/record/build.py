@@ -122,7 +122,7 @@ def settings(
     if found is not None:
         entered, margins, overshoot = found
         as_found = AsFound(
-            as_entered=parts.as_typed(entered, entry),
+            as_entered=parts.as_typed(entered, entry, pv_unit, co_unit),
             margins=parts.margins_info(margins),
             overshoot_pct=overshoot,
         )

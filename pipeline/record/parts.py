@@ -208,19 +208,22 @@ def criteria_info(criteria: Criteria) -> CriteriaInfo:
     )
 
 
-def as_typed(numbers: forms.Entered, entry: Entry) -> dict[str, Entered]:
+def as_typed(
+    numbers: forms.Entered, entry: Entry, pv_unit: str | None, co_unit: str | None
+) -> dict[str, Entered]:
     """Give settings as they are typed into the controller, named and with their units.
 
     Parameters
     ----------
     numbers : pipeline.loop.forms.Entered
     entry : Entry
+    pv_unit, co_unit : str or None
     """
     out: dict[str, Entered] = {}
     if numbers.proportional is not None:
         band = entry.proportional == "band"
         on_span = entry.proportional_basis == "span"
-        unit = "%" if band else ("%/%" if on_span else "CO per PV, engineering units")
+        unit = "%" if band else ("%/%" if on_span else f"{co_unit or 'CO unit'} per {pv_unit or 'PV unit'}")
         out["proportional_band" if band else "proportional_gain"] = Entered(
             value=numbers.proportional, unit=unit
         )
@@ -270,7 +273,7 @@ def controller_info(
         pv_filter_s=controller.pv_filter,
         scan_s=controller.scan,
         compute_delay_s=controller.compute_delay,
-        as_entered=as_typed(forms.enter(controller, entry), entry),
+        as_entered=as_typed(forms.enter(controller, entry), entry, pv_unit, co_unit),
     )
 
 
