@@ -353,7 +353,8 @@ def _degrees_near(
 def _grid(record: Record) -> NDArray[np.float64]:
     assert record.margins is not None and record.prediction is not None
     m = record.margins
-    known = [c.omega for c in m.crossings if math.isfinite(c.omega) and c.omega > 0]
+    # dead time makes phase crossings without end: only the one of the gain margin sets the view
+    known = [c.omega for c in m.crossings if c.kind == "gain" and math.isfinite(c.omega) and c.omega > 0]
     known += [w for w in (m.gain_crossover, m.phase_crossover) if math.isfinite(w) and w > 0]
     if not known:  # the loop never crosses: its response time gives the scale
         known = [2.0 / record.prediction.rise_s if math.isfinite(record.prediction.rise_s) else 1.0]
