@@ -11,7 +11,7 @@ from pipeline import __version__, advice
 from pipeline.bumps import Bump, bump_data, find_bumps
 from pipeline.cautions import Facts, cautions
 from pipeline.intake import read_log
-from pipeline.record import Made, Record, build, parts
+from pipeline.record import Made, Record, build, curves, parts
 from pipeline.settings import LoopSheet
 from pipeline.testquality import Quality, judge
 from pipeline.tuning.recommend import Recommended, Wanted, as_found, recommend, tune_model, wanted
@@ -183,7 +183,7 @@ def _record(
         criteria=asked.criteria,
         cautions=cautions(facts),
         next_steps=steps,
-        shown=parts.series(seen.log, data, None if choice is None else choice.best, pv_unit, co_unit),
+        shown=curves.series(seen.log, data, None if choice is None else choice.best, pv_unit, co_unit),
         identified=identified,
         settings=settings,
     )
@@ -193,9 +193,9 @@ def _rival_gains(choice: Choice, asked: Wanted, made: Recommended | None) -> dic
     """Give the controller gain that each believable structure would lead to, before any back-off."""
     if made is None:
         return {}
-    gains = {choice.best.structure: made.tuning.controller.gain}
+    gains = {choice.best.structure: parts.shown_gain(made.tuning.controller.gain, asked.entry)}
     for rival in choice.candidates[1:]:
         if rival.weight >= _RIVAL_WEIGHT:
             tuning = tune_model(rival.fit.model, asked, dead_time_floor=made.dead_time_floor)
-            gains[rival.fit.structure] = tuning.controller.gain
+            gains[rival.fit.structure] = parts.shown_gain(tuning.controller.gain, asked.entry)
     return gains

@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Literal
 
 from pipeline.findings import ALWAYS
 from pipeline.loop.forms import action_in_words
-from pipeline.record import parts
+from pipeline.record import curves, parts
 from pipeline.record.schema import (
     AsFound,
     Backoff,
@@ -186,7 +186,7 @@ def assemble(
             "binding": settings.binding,
             "backoff": Backoff(factor=settings.backed_off.factor, source=settings.source),
             "margins": parts.margins_info(settings.backed_off.margins),
-            "prediction": parts.prediction_info(settings.backed_off.prediction, settings.backed_off.bands),
+            "prediction": curves.prediction_info(settings.backed_off.prediction, settings.backed_off.bands),
             "bands": parts.bands_info(settings.backed_off.bands),
             "as_found": settings.as_found,
         }

@@ -4,10 +4,7 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING, Literal
 
-import numpy as np
-
 from pipeline.loop import forms
-from pipeline.record.files import RESPONSE_POINTS, SERIES_ROWS, thinned_rows
 from pipeline.record.schema import (
     BandsInfo,
     BumpInfo,
@@ -19,29 +16,23 @@ from pipeline.record.schema import (
     CrossingInfo,
     Entered,
     FitInfo,
-    LoadResponse,
     LogInfo,
     MarginsInfo,
     ModelInfo,
     Move,
     ParameterInfo,
-    PredictionInfo,
     QualityInfo,
-    Series,
-    SetpointResponse,
 )
 
 if TYPE_CHECKING:
     from collections.abc import Mapping, Sequence
 
-    from numpy.typing import NDArray
-
-    from fitters.fit import BumpData, Choice, Fit
+    from fitters.fit import Choice, Fit
     from pipeline.bumps import Bump
     from pipeline.findings import Caution
     from pipeline.intake.log import Log
     from pipeline.loop.forms import Entry
-    from pipeline.loop.types import Controller, Margins, Prediction, Trajectory
+    from pipeline.loop.types import Controller, Margins
     from pipeline.testquality import Quality
     from pipeline.tuning.types import Bands, Criteria
 
@@ -238,6 +229,20 @@ def as_typed(
     return out
 
 
+def shown_gain(gain: float, entry: Entry) -> float:
+    """Give a gain in percent of span over percent of span where both ranges are known.
+
+    Parameters
+    ----------
+    gain : float
+        [CO unit / PV unit].
+    entry : Entry
+    """
+    if entry.pv_span is None or entry.co_span is None:
+        return gain
+    return gain * entry.pv_span / entry.co_span
+
+
 def controller_info(
     controller: Controller, entry: Entry, pv_unit: str | None, co_unit: str | None
 ) -> ControllerInfo:
@@ -256,7 +261,7 @@ def controller_info(
         If the controller's equation cannot hold the settings, or a span it needs is missing.
     """
     on_span = entry.pv_span is not None and entry.co_span is not None
-    gain = controller.gain * (entry.pv_span / entry.co_span) if on_span else controller.gain  # type: ignore[operator]
+    gain = shown_gain(controller.gain, entry)
     gain_unit = "%/%" if on_span else f"{co_unit or 'CO'}/{pv_unit or 'PV'}"
     return ControllerInfo(
         kind=controller.kind,
@@ -300,35 +305,6 @@ def margins_info(margins: Margins) -> MarginsInfo:
     )
 
 
-def prediction_info(prediction: Prediction, bands: Bands | None) -> PredictionInfo:
-    """Give the predicted steps, thinned to what a figure can show.
-
-    Parameters
-    ----------
-    prediction : Prediction
-    bands : Bands or None
-        Band of the set-point step.
-    """
-    setpoint = prediction.setpoint
-    t, pv, co = _thin_trajectory(setpoint)
-    low = high = None
-    if bands is not None:
-        low = np.interp(t, bands.t, bands.low)
-        high = np.interp(t, bands.t, bands.high)
-    load_t, load_pv, load_co = _thin_trajectory(prediction.load)
-    return PredictionInfo(
-        overshoot_pct=prediction.overshoot,
-        rise_s=prediction.rise_time,
-        settling_s=prediction.settling_time,
-        load_peak=prediction.load_peak,
-        load_integrated_error=prediction.load_integrated_error,
-        co_peak=prediction.co_peak,
-        noise_gain=prediction.noise_gain,
-        setpoint=SetpointResponse.model_validate({"t_s": t, "pv": pv, "co": co, "low": low, "high": high}),
-        load=LoadResponse.model_validate({"t_s": load_t, "pv": load_pv, "co": load_co}),
-    )
-
-
 def bands_info(bands: Bands) -> BandsInfo:
     """Give the percentiles over the plausible models.
 
@@ -343,53 +319,3 @@ def bands_info(bands: Bands) -> BandsInfo:
         overshoot_pct=bands.overshoot,
         unstable_share=bands.unstable_share,
     )
-
-
-def series(
-    log: Log, data: BumpData | None, fit: Fit | None, pv_unit: str | None, co_unit: str | None
-) -> Series:
-    """Give the log as the figures show it, with the fit where it reaches.
-
-    Parameters
-    ----------
-    log : Log
-    data : BumpData or None
-        Rows the fit used.
-    fit : Fit or None
-    pv_unit, co_unit : str or None
-    """
-    rows = np.asarray(thinned_rows(log.co.tolist(), log.pv.tolist(), limit=SERIES_ROWS))
-    fitted = residual = None
-    if data is not None and fit is not None:
-        fitted = _at_rows(log.t[rows], data.t, fit.fitted)
-        residual = log.pv[rows] - fitted
-    return Series.model_validate(
-        {
-            "t_s": log.t[rows],
-            "pv": log.pv[rows],
-            "co": log.co[rows],
-            "fitted": fitted,
-            "residual": residual,
-            "pv_unit": pv_unit,
-            "co_unit": co_unit,
-        }
-    )
-
-
-def _thin_trajectory(
-    trajectory: Trajectory,
-) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
-    count = trajectory.t.size
-    if count <= RESPONSE_POINTS:
-        return trajectory.t, trajectory.pv, trajectory.co
-    rows = np.unique(np.round(np.linspace(0, count - 1, RESPONSE_POINTS)).astype(int))
-    return trajectory.t[rows], trajectory.pv[rows], trajectory.co[rows]
-
-
-def _at_rows(
-    wanted: NDArray[np.float64], t: NDArray[np.float64], values: NDArray[np.float64]
-) -> NDArray[np.float64]:
-    """Take the fit at the shown rows; NaN where no fitted row is that one."""
-    place = np.clip(np.searchsorted(t, wanted), 0, t.size - 1)
-    same = np.isclose(t[place], wanted, rtol=0.0, atol=1e-9 * max(float(t[-1]), 1.0))
-    return np.where(same, values[place], np.nan)

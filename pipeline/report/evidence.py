@@ -7,6 +7,9 @@ from pipeline.record import BumpInfo, ParameterInfo, Record
 from pipeline.report import numbers
 from pipeline.report.content import Block, Fact, Facts, Picture, Prose, Section, Table
 
+#: A structure with less weight than this is named but not tabled [1].
+_BELIEVABLE = 0.001
+
 
 def test(record: Record) -> Section:
     """The bumps, the verdict on them, and the log with what was fitted to it."""
@@ -107,6 +110,7 @@ def model(record: Record) -> Section | None:
         )
     ]
     if record.candidates:
+        believable = [c for i, c in enumerate(record.candidates) if i == 0 or c.weight >= _BELIEVABLE]
         unit = record.controller.gain_unit if record.controller else ""
         blocks.append(
             Table(
@@ -124,11 +128,14 @@ def model(record: Record) -> Section | None:
                         numbers.share(c.weight),
                         "none" if c.gain_recommended is None else numbers.plain(c.gain_recommended),
                     )
-                    for c in record.candidates
+                    for c in believable
                 ),
                 numeric=(False, True, True, True),
             )
         )
+        others = [_words(c.structure) for c in record.candidates if c not in believable]
+        if others:
+            blocks.append(Prose(text=f"Tried too, and far behind: {', '.join(others)}."))
     if record.choice_reason:
         blocks.append(Prose(text=record.choice_reason))
     return Section(key="model", title="The process model", blocks=tuple(blocks))

@@ -86,7 +86,7 @@ def build_outline(record: Record) -> Outline:
     built = (section(record) for section in sections)
     return Outline(
         title="Controller settings from a bump test",
-        tag=_sheet(record, "loop", "tag"),
+        tag=_tag(record),
         service=_sheet(record, "loop", "service"),
         verdict=record.verdict,
         headline=_HEADLINES[record.verdict],
@@ -95,6 +95,12 @@ def build_outline(record: Record) -> Outline:
         created=record.made.created,
         record_hash=hashlib.sha256(to_json(record).encode()).hexdigest(),
     )
+
+
+def _tag(record: Record) -> str:
+    """Give the loop's tag, or the log's name where the sheet has none."""
+    tag = _sheet(record, "loop", "tag")
+    return record.log.file if tag == numbers.NOT_GIVEN else tag
 
 
 def _sheet(record: Record, table: str, key: str) -> str:

@@ -42,7 +42,8 @@ def summary_text(outline: Outline) -> str:
     str
         Plain text without control characters, no newline at the end.
     """
-    lines = [f"{outline.tag}: {outline.service}", outline.headline]
+    service = "" if outline.service == numbers.NOT_GIVEN else f": {outline.service}"
+    lines = [f"{outline.tag}{service}", outline.headline]
     if outline.verdict != "withheld":
         lines += _aligned(outline.summary)
     blocks = [block for section in outline.sections for block in section.blocks]
