@@ -122,3 +122,16 @@ def test_a_refused_test_says_what_to_do(tunnel):
 def test_every_rule_is_a_function_with_a_sentence_of_its_own():
     assert len({rule.__name__ for rule in RULES}) == len(RULES) >= 25
     assert all(rule.__doc__ for rule in RULES)
+
+
+def test_a_gain_that_would_kick_the_output_to_its_limits_is_said(tunnel):
+    """The sump needs a gain of 25: a step as large as the test's own asks for more than the valve has."""
+    assert "output-kick" in {c.code for c in tuned("sump_level").cautions}
+    assert "output-kick" not in {c.code for c in tunnel.cautions}
+
+
+def test_rival_structures_are_told_in_the_controllers_own_unit():
+    record = tuned("hall_temperature_long_duct")
+    assert record.controller.gain != pytest.approx(record.controller.gain_engineering)
+    best = record.candidates[0]
+    assert best.gain_recommended * record.backoff.factor == pytest.approx(record.controller.gain)
