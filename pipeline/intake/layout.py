@@ -20,6 +20,8 @@ _MARKS = (
     "|i/o timeout|inf|-inf|+inf|infinity|-infinity|1.#j|1.#inf|-1.#inf|1.#ind|-1.#ind|1.#qnan|#n/a|#value!"
     "|#num!|#div/0!|overflow|over|under|shutdown|not connected"
 )
+#: Letters of a bad cell that a message shows.
+_SHOWN = 20
 #: Cells that stand for "no value": blanks and what loggers write for a bad reading.
 MISSING = ("", *_MARKS.split("|"))
 
@@ -176,6 +178,17 @@ def _no_numbers(lines: Sequence[str], filled: Sequence[int], file: str) -> LogUn
             line=filled[0] + 1,
             remedy="A log needs at least a PV and a CO column: export both on one clock.",
         )
+    for i in filled[1:2]:  # the first line below the names, cell by cell
+        delimiter = max(",;\t", key=lines[i].count)
+        for place, cell in enumerate(split_cells(lines[i], delimiter), start=1):
+            if lines[i].count(delimiter) and not is_number(cell) and _STAMP.match(cell) is None:
+                return LogUnreadable(
+                    f'The file holds no rows of numbers: "{cell[:_SHOWN]}" stands where one should be.',
+                    file=file,
+                    line=i + 1,
+                    column=place,
+                    remedy="Export the log as text with one row per sample: time, PV, CO.",
+                )
     return LogUnreadable(
         "The file holds no rows of numbers in columns.",
         file=file,
