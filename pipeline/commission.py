@@ -17,9 +17,11 @@ from pipeline.testquality import Quality, judge
 from pipeline.tuning.recommend import Recommended, Wanted, as_found, recommend, tune_model, wanted
 
 if TYPE_CHECKING:
+    from collections.abc import Sequence
     from pathlib import Path
 
     from fitters.fit import BumpData, Choice
+    from pipeline.findings import Caution
     from pipeline.intake.log import Log
     from pipeline.loop.types import Kind
 
@@ -124,7 +126,7 @@ def commission(path: Path, *, request: Request) -> Record:
     if seen.quality.verdict != "do not use":
         data = bump_data(seen.log, seen.bumps)
         choice = choose(data)
-        if not _stops(_facts(seen, sheet, asked, choice, None)):
+        if not _stopped(cautions(_facts(seen, sheet, asked, choice, None))):
             recommended = recommend(choice.best, asked, log_interval=seen.log.interval)
     return _record(seen, sheet, asked, data, choice, recommended)
 
@@ -144,8 +146,8 @@ def _facts(
     )
 
 
-def _stops(facts: Facts) -> bool:
-    return any(caution.level == "stop" for caution in cautions(facts))
+def _stopped(told: Sequence[Caution]) -> bool:
+    return any(caution.level == "stop" for caution in told)
 
 
 def _record(
@@ -157,11 +159,11 @@ def _record(
     made: Recommended | None,
 ) -> Record:
     """Write down what was found; settings only where nothing stops them."""
-    facts = _facts(seen, sheet, asked, choice, made)
+    told = cautions(_facts(seen, sheet, asked, choice, made))
     pv_unit = sheet.pv.unit or seen.log.pv_column.unit
     co_unit = sheet.co.unit or seen.log.co_column.unit
     settings = None
-    if choice is not None and made is not None and not _stops(facts):
+    if choice is not None and made is not None and not _stopped(told):
         found = as_found(choice.best, sheet, asked, made.dead_time_floor)
         settings = build.settings(made.tuning, made.backed_off, asked.entry, found, pv_unit, co_unit)
         steps = advice.after_settings(made.backed_off, seen.bumps, sheet, pv_unit or "PV units", choice.best)
@@ -181,7 +183,7 @@ def _record(
         bumps=parts.bump_infos(seen.bumps),
         quality=parts.quality_info(seen.quality),
         criteria=asked.criteria,
-        cautions=cautions(facts),
+        cautions=told,
         next_steps=steps,
         shown=curves.series(seen.log, data, None if choice is None else choice.best, pv_unit, co_unit),
         identified=identified,

@@ -35,6 +35,9 @@ _NotNegative = Annotated[float, Field(ge=0, allow_inf_nan=False)]
 _Finite = Annotated[float, Field(allow_inf_nan=False)]
 _Share = Annotated[float, Field(ge=0, le=1)]
 _Text = Annotated[str, Field(min_length=1)]
+#: A signal in percent spans this much where no range is given [%].
+_PERCENT_SPAN = 100.0
+
 #: A column by its header text, or by its position counted from 1.
 ColumnName = _Text | Annotated[int, Field(ge=1, strict=True)]
 
@@ -116,6 +119,18 @@ class RangeTable(_Table):
     def span(self) -> float | None:
         """Range width [unit], None if not given."""
         return None if self.low is None or self.high is None else self.high - self.low
+
+    def span_in(self, unit: str | None = None) -> float | None:
+        """Give the range width, taking a signal in percent to span all of it.
+
+        Parameters
+        ----------
+        unit : str or None
+            Unit the log gives, where the sheet gives none.
+        """
+        if self.span is None and (self.unit or unit) == "%":
+            return _PERCENT_SPAN
+        return self.span
 
 
 class ControllerTable(_Table):

@@ -60,7 +60,7 @@ def cautions(facts: Facts) -> tuple[Caution, ...]:
     Returns
     -------
     tuple of Caution
-        Findings on the test, what the rules say, and the tuner's own remarks.
+        Findings on the test, what the rules say, and the remarks of tuner and back-off.
     """
     found = [*facts.quality.findings, *facts.log.notes]
     found += [caution for rule in RULES if (caution := rule(facts)) is not None]
@@ -69,4 +69,6 @@ def cautions(facts: Facts) -> tuple[Caution, ...]:
             found.append(Caution(code=code, level="care" if code in _RESTRICTING else "note", text=text))
     if facts.tuning is not None:
         found += facts.tuning.remarks
+    if facts.backed_off is not None:
+        found += facts.backed_off.remarks
     return worst_first(found)

@@ -21,8 +21,6 @@ _UNSTABLE_STOP = 0.05
 _KICK = 0.5
 #: An output shaken by more than this share of its range wears its final element (common practice: 1 to 2 %) [1].
 _SHAKE = 0.015
-#: A signal in percent spans this much where no range is given [%].
-_PERCENT_SPAN = 100.0
 
 
 def action_differs(facts: Facts) -> Caution | None:
@@ -157,7 +155,7 @@ def scan_counted(facts: Facts) -> Caution | None:
 
 def output_kick(facts: Facts) -> Caution | None:
     """Say that a step as large as the test's would drive the output to its limits."""
-    span = facts.sheet.co.span or (_PERCENT_SPAN if facts.log.co_column.unit == "%" else None)
+    span = facts.sheet.co.span_in(facts.log.co_column.unit)
     if facts.backed_off is None or facts.choice is None or span is None:
         return None
     step = float(np.ptp(facts.choice.best.fitted))
@@ -177,7 +175,7 @@ def output_kick(facts: Facts) -> Caution | None:
 
 def noisy_output(facts: Facts) -> Caution | None:
     """Say that the PV's noise would shake the final element."""
-    span = facts.sheet.co.span or (_PERCENT_SPAN if facts.log.co_column.unit == "%" else None)
+    span = facts.sheet.co.span_in(facts.log.co_column.unit)
     if facts.backed_off is None or facts.choice is None or span is None:
         return None
     shake = facts.backed_off.prediction.noise_gain * facts.choice.best.noise_sd / span

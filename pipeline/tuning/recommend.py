@@ -25,8 +25,6 @@ if TYPE_CHECKING:
 PLAUSIBLE = 500
 #: Fixed, so that one log gives one record.
 _SEED = 20_261_201
-#: A signal in percent spans this much where no range is given [%].
-_PERCENT_SPAN = 100.0
 #: Share of a log interval by which a dead time may be missed at both ends: held CO, sampled PV [1].
 _UNSEEN_SHARE = 0.5
 
@@ -134,7 +132,7 @@ def entry_of(sheet: LoopSheet) -> Entry:
     sheet : LoopSheet
     """
     c = sheet.controller
-    pv_span, co_span = _span(sheet.pv.span, sheet.pv.unit), _span(sheet.co.span, sheet.co.unit)
+    pv_span, co_span = sheet.pv.span_in(), sheet.co.span_in()
     known = pv_span is not None and co_span is not None
     usual = Entry()
     return Entry(
@@ -171,9 +169,7 @@ def recommend(fit: Fit, asked: Wanted, *, log_interval: float) -> Recommended:
     tuning = tune_model(fit.model, asked, dead_time_floor=floor)
     models = [_floored(model, floor) for model in fit.draw(PLAUSIBLE, _SEED)]
     backed_off = back_off(tuning, models, asked.criteria)
-    check_agreement(
-        _floored(fit.model, floor), backed_off.controller, backed_off.margins, backed_off.prediction
-    )
+    check_agreement(tuning.model, backed_off.controller, backed_off.margins, backed_off.prediction)
     return Recommended(tuning=tuning, backed_off=backed_off, dead_time_floor=floor)
 
 
@@ -265,10 +261,6 @@ def as_found(
 
 def _floored(model: ProcessModel, floor: float) -> ProcessModel:
     return model if model.dead_time >= floor else replace(model, dead_time=floor)
-
-
-def _span(span: float | None, unit: str | None) -> float | None:
-    return _PERCENT_SPAN if span is None and unit == "%" else span
 
 
 def _first(*values: float | None) -> float | None:

@@ -104,7 +104,7 @@ def lower_end(low: float, by: int, gain: float) -> Caution:
             "the fast branch is given. Turning the gain down does not make this loop safer.",
         )
     return Caution(
-        code="lower-gain-limit",
+        code="lower-end-of-criteria",
         level="note",
         value=low,
         limit=gain,

@@ -1,14 +1,19 @@
 """The main job: what goes in decides what comes out, the same each time."""
 
 import json
+from dataclasses import replace
 from pathlib import Path
 
 import pytest
 
-from pipeline.cautions import RULES
-from pipeline.commission import Request, commission
+from fitters.choose import choose
+from pipeline.bumps import bump_data
+from pipeline.cautions import RULES, Facts, cautions
+from pipeline.commission import Request, commission, inspect
+from pipeline.findings import Caution
 from pipeline.record import to_json
 from pipeline.settings import LoopSheet, load_sheet
+from pipeline.tuning.recommend import recommend, wanted
 
 DEMO = Path(__file__).parents[2] / "demo_logs"
 TUNNEL = DEMO / "tunnel_air_temperature.csv"
@@ -135,3 +140,24 @@ def test_rival_structures_are_told_in_the_controllers_own_unit():
     assert record.controller.gain != pytest.approx(record.controller.gain_engineering)
     best = record.candidates[0]
     assert best.gain_recommended * record.backoff.factor == pytest.approx(record.controller.gain)
+
+
+def test_what_the_back_off_has_to_say_reaches_the_reader():
+    seen = inspect(TUNNEL, request=Request())
+    said = Caution(code="back-off-not-enough", level="care", text="A better test would narrow the models.")
+    asked = wanted(
+        LoopSheet(), kind="PI", phase_margin=None, gain_margin=None, max_sensitivity=None, overshoot_pct=None
+    )
+    choice = choose(bump_data(seen.log, seen.bumps))
+    made = recommend(choice.best, asked, log_interval=seen.log.interval)
+    facts = Facts(
+        log=seen.log,
+        sheet=LoopSheet(),
+        quality=seen.quality,
+        choice=choice,
+        criteria=asked.criteria,
+        tuning=made.tuning,
+        backed_off=replace(made.backed_off, remarks=(said,)),
+        dead_time_floor=made.dead_time_floor,
+    )
+    assert said in cautions(facts)
