@@ -42,17 +42,14 @@ class GainsByMove:
 
     Attributes
     ----------
-    at : (g,) ndarray
-        Time of each move, or of the first move of each direction [s].
     scale : (g,) ndarray
-        Its gain over the largest one [1].
+        Gain of each move, or of each direction (down, up), over the largest one [1].
     differ : bool
         They differ by more than the log's uncertainty.
     data : BumpData
         The same test with the moves scaled to what they achieved.
     """
 
-    at: NDArray[np.float64]
     scale: NDArray[np.float64]
     differ: bool
     data: BumpData
@@ -65,7 +62,7 @@ def gains_by_move(problem: Problem, estimate: Estimate) -> GainsByMove:
     ----------
     problem : Problem
     estimate : Estimate
-        Of a structure with one gain.
+        Of a structure with one gain; its lags and dead time are taken as they are.
 
     Returns
     -------
@@ -99,8 +96,7 @@ def gains_by_move(problem: Problem, estimate: Estimate) -> GainsByMove:
             between = float(np.sqrt(max(cov[high, high] + cov[low, low] - 2.0 * cov[high, low], 0.0)))
             explained = estimate.cost > _EXPLAINED * float(residual @ residual)
             differ = bool(gap > _SURE * between or explained)
-    first = np.array([float(held.at[group == g][0]) for g in range(count)])
-    return GainsByMove(at=first, scale=scale, differ=differ, data=_scaled(problem.data, held, scale[group]))
+    return GainsByMove(scale=scale, differ=differ, data=_scaled(problem.data, held, scale[group]))
 
 
 def _solve(

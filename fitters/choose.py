@@ -72,22 +72,16 @@ def choose(data: BumpData) -> Choice:
         raise ValueError("The CO never moves in this part of the log.")
     problem = Problem(data, np.ones(data.t.size, dtype=bool), drift=True, settling=False)
     problem, screened, apart = _prepared(problem)
-    moves = gains_by_move(problem, as_screened(problem, _simplest(screened)))
-    if moves.differ:
-        data = moves.data
-        problem = Problem(data, problem.used, drift=True, settling=problem.settling)
-        screened = _screen_all(problem)
-        again = gains_by_move(problem, as_screened(problem, _simplest(screened)))
-        if again.differ:  # once more, now that lags and dead time are nearly right
-            data = again.data
-            problem = Problem(data, problem.used, drift=True, settling=problem.settling)
-            screened = _screen_all(problem)
-    used = problem.used
+    problem, screened, moves = _with_own_gains(problem, screened)
+    data, used = problem.data, problem.used
     estimates = _settle_contenders(problem, screened)
     noise = _common_noise(estimates, data, used)
     sure = [e for e in estimates if _told_by_the_log(e, data) and _leading_gain_sure(e, data, used, noise)]
-    ranked = sorted(sure or estimates, key=lambda e: _criterion(e, data, used, noise))
-    scores = np.array([_criterion(e, data, used, noise) for e in ranked])
+    scored = sorted(
+        ((_criterion(e, data, used, noise), e) for e in sure or estimates), key=lambda pair: pair[0]
+    )
+    ranked = [estimate for _, estimate in scored]
+    scores = np.array([score for score, _ in scored])
     weights = np.exp(-0.5 * (scores - scores[0]))
     weights /= weights.sum()
     drift_kept = _drift_matters(ranked[0], data, used)
@@ -119,6 +113,25 @@ def _prepared(problem: Problem) -> tuple[Problem, list[Screened], NDArray[np.boo
         problem = Problem(problem.data, ~apart, drift=True, settling=problem.settling)
         screened = _screen_all(problem)
     return problem, screened, apart
+
+
+def _with_own_gains(
+    problem: Problem, screened: list[Screened]
+) -> tuple[Problem, list[Screened], GainsByMove]:
+    """Scale the moves to what they achieved, where they were not answered alike.
+
+    Lags and dead time that one gain has spoilt spoil the gains too, so this is done twice,
+    each time against the moves as logged.
+    """
+    moves = gains_by_move(problem, as_screened(problem, _simplest(screened)))
+    if not moves.differ:
+        return problem, screened, moves
+    scaled = Problem(moves.data, problem.used, drift=True, settling=problem.settling)
+    better = as_screened(scaled, _simplest(_screen_all(scaled)))
+    second = gains_by_move(problem, better)
+    moves = replace(second, differ=True)
+    scaled = Problem(moves.data, problem.used, drift=True, settling=problem.settling)
+    return scaled, _screen_all(scaled), moves
 
 
 def _simplest(screened: list[Screened]) -> Screened:
@@ -202,10 +215,13 @@ def _told_by_the_log(estimate: Estimate, data: BumpData) -> bool:
     """Tell whether the structure is what it stands for, and the rows dense enough to show it."""
     if not estimate.structure.admits(estimate.gains):
         return False
-    poles = estimate.structure.model(estimate.search, estimate.gains, 0.0).poles
+    model = estimate.structure.model(estimate.search, estimate.gains, 0.0)
+    poles = model.poles
     fast = float(np.max(np.abs(poles), initial=0.0)) * _SHORTEST_LAG * data.interval > 1.0
     rings = float(np.max(np.abs(poles.imag), initial=0.0)) * _ROWS_A_PERIOD * data.interval > 2.0 * np.pi
-    return not (fast or rings)
+    # a zero slower than the whole record: its slow part never showed
+    slow = bool(np.any(np.abs(model.zeros) * data.span < 1.0))
+    return not (fast or rings or slow)
 
 
 def _leading_gain_sure(estimate: Estimate, data: BumpData, used: NDArray[np.bool_], noise: Noise) -> bool:

@@ -66,7 +66,6 @@ class Estimate:
         PV before the first move [PV unit].
     drift : float
         Drift [PV unit/s], zero when not fitted.
-    drift_fitted : bool
     residual : (n,) ndarray
         PV minus fit over all rows, set-aside ones included [PV unit].
     jacobian : (m, p) ndarray
@@ -88,7 +87,6 @@ class Estimate:
     gains: NDArray[np.float64]
     offset: float
     drift: float
-    drift_fitted: bool
     residual: NDArray[np.float64]
     jacobian: NDArray[np.float64]
     cost: float
@@ -302,7 +300,6 @@ def _collect(problem: Problem, structure: Structure, end: _End, ends: list[_End]
         gains=weights[: structure.gains],
         offset=float(levels[0] + problem.level),
         drift=float(levels[1]) if problem.drift else 0.0,
-        drift_fitted=problem.drift,
         residual=residual,
         jacobian=np.column_stack([by_search.T, by_dead_time, linear]),
         cost=float(used_residual @ used_residual),

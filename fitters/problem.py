@@ -18,6 +18,7 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from fitters.fit import BumpData
+    from fitters.response import Response
     from fitters.structures.base import Structure
 
 #: Searched logarithms beyond these leave the shapes without meaning: exp(+-40).
@@ -114,9 +115,7 @@ class Problem:
         slopes : (k + 1, m) ndarray
             Kaufman's derivative of the residual by the searched numbers and the dead time.
         """
-        response = respond(structure, self.held, limited(search), dead_time)
-        basis, factors = _orthonormal(self.without_level(response.value), self.pv)
-        residual = self.pv - (basis @ self.pv) @ basis
+        response, basis, factors, residual = self._solved(structure, search, dead_time)
         change = np.empty((structure.searched + 1, residual.size))
         change[:-1] = np.einsum("r,krn->kn", factors, response.by_search)
         change[-1] = factors @ response.by_dead_time
@@ -140,8 +139,7 @@ class Problem:
         -------
         (r,) ndarray
         """
-        value = respond(structure, self.held, limited(search), dead_time).value
-        return _orthonormal(self.without_level(value), self.pv)[1]
+        return self._solved(structure, search, dead_time)[2]
 
     def costs(
         self, structure: Structure, search: NDArray[np.float64], dead_times: NDArray[np.float64]
@@ -162,11 +160,17 @@ class Problem:
         """
         out = np.empty(dead_times.size)
         for i, dead_time in enumerate(dead_times):
-            value = respond(structure, self.held, limited(search), float(dead_time)).value
-            basis, _ = _orthonormal(self.without_level(value), self.pv)
-            residual = self.pv - (basis @ self.pv) @ basis
+            residual = self._solved(structure, search, float(dead_time))[3]
             out[i] = residual @ residual
         return out
+
+    def _solved(
+        self, structure: Structure, search: NDArray[np.float64], dead_time: float
+    ) -> tuple[Response, NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
+        """Give the response, its orthonormal basis, the linear factors and what they leave over."""
+        response = respond(structure, self.held, limited(search), dead_time)
+        basis, factors = _orthonormal(self.without_level(response.value), self.pv)
+        return response, basis, factors, self.pv - (basis @ self.pv) @ basis
 
 
 def limited(search: NDArray[np.float64]) -> NDArray[np.float64]:

@@ -14,10 +14,6 @@ if TYPE_CHECKING:
 
     from numpy.typing import NDArray
 
-#: Lags searched lie between this share of the log interval and this multiple of the record.
-_SHORTEST_LAG = 0.02
-_LONGEST_LAG = 1e4
-
 
 def lag_starts(span: float, interval: float, count: int) -> Iterator[float]:
     """Give logarithms of lags from near the log interval to beyond the record.
@@ -189,15 +185,3 @@ def _even_and_odd(
         decay = np.exp(-zeta * x)
         even, odd = decay * np.cos(w * x), decay * np.sin(w * x) / w
     return even, odd, (x * even - odd) / (2.0 * square)
-
-
-def clipped(log_lag: float, span: float, interval: float) -> float:
-    """Keep a searched logarithm of a lag where a log can still tell it from nothing.
-
-    Parameters
-    ----------
-    log_lag : float
-    span, interval : float
-        Length and spacing of the record [s].
-    """
-    return float(np.clip(log_lag, np.log(_SHORTEST_LAG * interval), np.log(_LONGEST_LAG * span)))

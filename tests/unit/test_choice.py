@@ -96,3 +96,11 @@ def test_weights_sum_to_one_and_the_first_place_is_explained():
     assert sum(c.weight for c in choice.candidates) == pytest.approx(1.0)
     assert choice.candidates[0].fit is choice.best and choice.candidates[0].score == 0.0
     assert choice.best.structure.capitalize() in choice.reason
+
+
+def test_the_largest_gain_is_one_of_those_seen_however_wrong_the_first_look():
+    """Gains 1, 0.6 and 0.8 of the largest on a second-order plant: one gain spoils the first look's lags."""
+    plant = ProcessModel(numerator=(2.0,), denominator=(240.0, 32.0, 1.0), dead_time=2.0)
+    best = choose(log(sizes=(5.0, -5.0 * 0.6, 6.0 * 0.8), plant=plant)).best
+    assert "gain-differs-between-moves" in codes(best)
+    within(best, gain=(2.0, 0.02))
