@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from fitters.between import GainsByMove, gains_by_move
-from fitters.estimate import Screened, as_screened, screen, settle
+from fitters.estimate import Screened, as_screened, resettle, screen, settle
 from fitters.fit import Candidate, Choice
 from fitters.intervals import to_fit
 from fitters.noise import colour, covariance, outliers, whitened_sum
@@ -41,8 +41,10 @@ _GAIN_SURE = 2.0
 #: Candidates with less weight than this are listed but not refined further [1].
 _WEIGHT_THAT_COUNTS = 0.01
 #: At least this many structures are settled from several starts, and all within this distance.
-_CONTENDERS = 3
+_CONTENDERS = 2
 _CONTENDER_DISTANCE = 12.0
+#: Mean squares below this, in squared spreads of the PV, a quick look does not tell apart [1].
+_SCREENED_PERFECT = 1e-8
 #: A drift that moves the PV by less than this share of its range is arithmetic [1].
 _DRIFT_SEEN = 1e-5
 #: Residuals below this share of the PV's range are arithmetic, not noise [1].
@@ -84,13 +86,14 @@ def choose(data: BumpData) -> Choice:
     scores = np.array([score for score, _ in scored])
     weights = np.exp(-0.5 * (scores - scores[0]))
     weights /= weights.sum()
-    drift_kept = _drift_matters(ranked[0], data, used)
+    drift_kept = _drift_matters(ranked[0], data, used, noise)
+    driftless = Problem(data, used, drift=False, settling=problem.settling)
     candidates = []
     for estimate, score, weight in zip(ranked, scores, weights, strict=True):
         settled, own = estimate, noise
         if weight >= _WEIGHT_THAT_COUNTS:
             if not drift_kept and estimate.structure.integrators == 0:
-                settled = _without_drift(estimate, problem)
+                settled = resettle(driftless, estimate)
             own = colour(settled.residual[used], data.t[used], settled.jacobian)
         fit = to_fit(settled, data, used, own, float(score))
         candidates.append(Candidate(fit=fit, score=float(score - scores[0]), weight=float(weight)))
@@ -141,7 +144,7 @@ def _simplest(screened: list[Screened]) -> Screened:
 
 def _screen_all(problem: Problem) -> list[Screened]:
     """Look at every structure quickly, closest to the log first."""
-    return sorted((screen(problem, structure) for structure in all_structures()), key=lambda s: s.cost)
+    return screen(problem, all_structures())
 
 
 def _still_settling(problem: Problem, screened: list[Screened], closest: Estimate) -> bool:
@@ -162,7 +165,7 @@ def _still_settling(problem: Problem, screened: list[Screened], closest: Estimat
         return False
     settling = Problem(problem.data, problem.used, drift=problem.drift, settling=True)
     tried = {screened[0].structure.name: screened[0].structure, "first order": structure_named("first order")}
-    cost = min(screen(settling, structure).cost for structure in tried.values())
+    cost = screen(settling, list(tried.values()))[0].cost
     rows = problem.pv.size
     floor = rows * _ARITHMETIC**2
     return bool(rows * np.log(max(screened[0].cost, floor) / max(cost, floor)) > _SETTLING_GAIN)
@@ -172,7 +175,7 @@ def _settle_contenders(problem: Problem, screened: list[Screened]) -> list[Estim
     """Settle the structures whose criterion, seen roughly, leaves them a chance; the others as they are."""
     count = problem.pv.size
     rough = [
-        count * np.log(max(s.cost, 1e-18 * count)) + s.structure.parameter_count * np.log(count)
+        count * np.log(max(s.cost, _SCREENED_PERFECT * count)) + s.structure.parameter_count * np.log(count)
         for s in screened
     ]
     order = np.argsort(rough, kind="stable")
@@ -181,19 +184,6 @@ def _settle_contenders(problem: Problem, screened: list[Screened]) -> list[Estim
         contender = place < _CONTENDERS or rough[index] < rough[order[0]] + _CONTENDER_DISTANCE
         out.append(settle(problem, screened[index]) if contender else as_screened(problem, screened[index]))
     return out
-
-
-def _without_drift(estimate: Estimate, problem: Problem) -> Estimate:
-    problem = Problem(problem.data, problem.used, drift=False, settling=problem.settling)
-    start = (estimate.search, estimate.dead_time)
-    begun = Screened(structure=estimate.structure, end=start, cost=estimate.cost, starts=(start,))
-    settled = settle(problem, begun, several=False)
-    return replace(
-        settled,
-        starts=estimate.starts,
-        starts_agreeing=estimate.starts_agreeing,
-        rival_dead_times=estimate.rival_dead_times,
-    )
 
 
 def _common_noise(estimates: list[Estimate], data: BumpData, used: NDArray[np.bool_]) -> Noise:
@@ -234,10 +224,9 @@ def _leading_gain_sure(estimate: Estimate, data: BumpData, used: NDArray[np.bool
     return bool(abs(estimate.gains[0]) > _GAIN_SURE * np.sqrt(variance))
 
 
-def _drift_matters(estimate: Estimate, data: BumpData, used: NDArray[np.bool_]) -> bool:
+def _drift_matters(estimate: Estimate, data: BumpData, used: NDArray[np.bool_], noise: Noise) -> bool:
     """Hold the drift against its own standard error under the noise's colour."""
-    own = colour(estimate.residual[used], data.t[used], estimate.jacobian)
-    variance = covariance(estimate.jacobian, data.t[used], own)[-1, -1]
+    variance = covariance(estimate.jacobian, data.t[used], noise)[-1, -1]
     moved = abs(estimate.drift) * data.span
     return bool(
         abs(estimate.drift) > _DRIFT_SURE * np.sqrt(variance) and moved > _DRIFT_SEEN * np.ptp(data.pv)
@@ -302,6 +291,6 @@ def fit_named(data: BumpData, name: str) -> Fit:
     """
     used = np.ones(data.t.size, dtype=bool)
     problem = Problem(data, used, drift=True, settling=False)
-    estimate = settle(problem, screen(problem, structure_named(name)))
+    estimate = settle(problem, screen(problem, [structure_named(name)])[0])
     noise = colour(estimate.residual, data.t, estimate.jacobian)
     return to_fit(estimate, data, used, noise, _criterion(estimate, data, used, noise))

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -36,12 +36,15 @@ class BumpData:
         before ``t[0]``; before it the CO is taken to have had its first value for ever.
     co_values : (m,) ndarray
         CO from each of those times until the next [CO unit].
+    interval : float
+        Median spacing of the rows [s].
     """
 
     t: NDArray[np.float64]
     pv: NDArray[np.float64]
     co_times: NDArray[np.float64]
     co_values: NDArray[np.float64]
+    interval: float = field(init=False)
 
     def __post_init__(self) -> None:
         for name in ("t", "pv", "co_times", "co_values"):
@@ -55,11 +58,7 @@ class BumpData:
         for name in ("t", "pv", "co_times", "co_values"):
             if not np.all(np.isfinite(getattr(self, name))):
                 raise ValueError("A bump must hold finite values only.")
-
-    @property
-    def interval(self) -> float:
-        """Median spacing of the rows [s]."""
-        return float(np.median(np.diff(self.t)))
+        object.__setattr__(self, "interval", float(np.median(np.diff(self.t))))
 
     @property
     def span(self) -> float:

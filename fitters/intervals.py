@@ -5,7 +5,7 @@ from __future__ import annotations
 from typing import TYPE_CHECKING
 
 import numpy as np
-from scipy.stats import t as student
+from scipy.special import stdtrit
 
 from fitters.fit import Fit, Parameter, frozen
 from fitters.noise import covariance
@@ -52,7 +52,7 @@ def to_fit(
     """
     cov = _parameter_covariance(estimate, data, used, noise)
     degrees = max(noise.effective_samples - cov.shape[0], _FEWEST_DEGREES)
-    quantile = float(student.ppf(0.5 + 0.5 * _COVERAGE, degrees))
+    quantile = float(stdtrit(degrees, 0.5 + 0.5 * _COVERAGE))
     parameters, own = _parameters(estimate, cov, quantile, data.interval)
     correlation = _correlation(own)
     model = estimate.structure.model(estimate.search, estimate.gains, max(estimate.dead_time, 0.0))

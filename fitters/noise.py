@@ -159,8 +159,8 @@ def whitened_sum(residual: NDArray[np.float64], t: NDArray[np.float64], noise: N
     """
     if noise.slow_share <= 0.0:
         return float(residual @ residual)
-    precision, _ = _precision(t, noise.correlation)
-    return float(_weighted(residual[:, None], precision, noise.slow_share)[0][0, 0])
+    upper, diagonal, _ = _precision(t, np.array([noise.correlation]))
+    return float(_weighted(residual[:, None], upper, diagonal, np.array([noise.slow_share]))[0][0, 0, 0])
 
 
 def outliers(residual: NDArray[np.float64], resolution: float) -> NDArray[np.bool_]:
@@ -202,86 +202,96 @@ def _search(columns: NDArray[np.float64], t: NDArray[np.float64]) -> tuple[float
     high = np.log(_LONGEST_CORRELATION * float(t[-1] - t[0]))
     if high <= low:
         return None
-    grid = np.linspace(low, high, _CORRELATION_GRID)
-    table = np.array([[_deviance(columns, t, g, share)[0] for share in _SHARES] for g in grid])
-    row, column = np.unravel_index(int(np.argmin(table)), table.shape)
-    log_time, share = float(grid[row]), float(_SHARES[column])
-    step, reach = float(grid[1] - grid[0]), 0.5
-    best = float(table[row, column])
+    times, shares = (
+        a.ravel() for a in np.meshgrid(np.linspace(low, high, _CORRELATION_GRID), _SHARES, indexing="ij")
+    )
+    step, reach = (high - low) / (_CORRELATION_GRID - 1), 0.5
+    best, log_time, share, variance = _lowest(columns, t, times, shares)
     # A short pattern search: the deviance is flat at its bottom, so three halvings suffice.
     for _ in range(3):
         step, reach = 0.5 * step, 0.5 * reach
-        for t_try, s_try in (
-            (log_time - step, share),
-            (log_time + step, share),
-            (log_time, share * (1.0 - reach)),
-            (log_time, 1.0 - (1.0 - share) * (1.0 - reach)),
-            (log_time + step, share * (1.0 - reach)),
-            (log_time - step, 1.0 - (1.0 - share) * (1.0 - reach)),
-        ):
-            if not low <= t_try <= high:
-                continue
-            value = _deviance(columns, t, t_try, s_try)[0]
-            if value < best:
-                best, log_time, share = value, t_try, s_try
-    return best, float(np.exp(log_time)), share, _deviance(columns, t, log_time, share)[1]
+        less, more = share * (1.0 - reach), 1.0 - (1.0 - share) * (1.0 - reach)
+        times = np.clip(log_time + step * np.array([-1.0, 1.0, 0.0, 0.0, 1.0, -1.0]), low, high)
+        found = _lowest(columns, t, times, np.array([share, share, less, more, less, more]))
+        if found[0] < best:
+            best, log_time, share, variance = found
+    return best, float(np.exp(log_time)), share, variance
 
 
 def _white_deviance(columns: NDArray[np.float64]) -> tuple[float, float]:
-    gram = columns.T @ columns
-    return _from_gram(gram, 0.0, columns.shape[0])
+    deviance, variance = _from_grams((columns.T @ columns)[None], np.zeros(1), columns.shape[0])
+    return float(deviance[0]), float(variance[0])
 
 
-def _deviance(
-    columns: NDArray[np.float64], t: NDArray[np.float64], log_time: float, share: float
-) -> tuple[float, float]:
-    """Give -2 log of the restricted likelihood, up to a constant, and the variance."""
-    precision, log_det = _precision(t, float(np.exp(log_time)))
-    gram, more = _weighted(columns, precision, share)
-    return _from_gram(gram, log_det + more, columns.shape[0])
+def _lowest(
+    columns: NDArray[np.float64],
+    t: NDArray[np.float64],
+    log_times: NDArray[np.float64],
+    shares: NDArray[np.float64],
+) -> tuple[float, float, float, float]:
+    """Find the lowest -2 log of the restricted likelihood, up to a constant, among some colours.
 
-
-def _from_gram(gram: NDArray[np.float64], log_det: float, count: int) -> tuple[float, float]:
-    """Finish the likelihood from X' R**-1 X with the residual as its last column."""
-    p = gram.shape[0] - 1
-    scale = np.sqrt(np.diag(gram))
-    root = scale[:, None] * np.linalg.cholesky(gram / np.outer(scale, scale) + _RIDGE * np.eye(p + 1))
-    variance = float(root[p, p] ** 2) / (count - p)
-    deviance = (count - p) * np.log(variance) + log_det + 2.0 * float(np.sum(np.log(np.diag(root)[:p])))
-    return float(deviance), variance
-
-
-def _precision(t: NDArray[np.float64], correlation: float) -> tuple[NDArray[np.float64], float]:
-    """Give the inverse correlation of the slow part, tridiagonal, and log det of the correlation.
-
-    Returns the elements above the diagonal, after a zero, and the diagonal.
+    Returns it with its log correlation time, slow share and variance.
     """
-    memory = np.exp(-np.diff(t) / correlation)
-    fresh = -np.expm1(-2.0 * np.diff(t) / correlation)
-    diagonal = np.ones(t.size)
-    diagonal[1:] = 1.0 / fresh
-    diagonal[:-1] += memory**2 / fresh
-    above = np.concatenate([[0.0], -memory / fresh])
-    return np.vstack([above, diagonal]), float(np.sum(np.log(fresh)))
+    upper, diagonal, log_det = _precision(t, np.exp(log_times))
+    grams, more = _weighted(columns, upper, diagonal, shares)
+    deviance, variance = _from_grams(grams, log_det + more, columns.shape[0])
+    best = int(np.argmin(deviance))
+    return float(deviance[best]), float(log_times[best]), float(shares[best]), float(variance[best])
+
+
+def _from_grams(
+    grams: NDArray[np.float64], log_det: NDArray[np.float64], count: int
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Finish the likelihoods from X' R**-1 X with the residual as its last column."""
+    p = grams.shape[-1] - 1
+    scale = np.sqrt(np.einsum("cii->ci", grams))
+    scaled = grams / (scale[:, :, None] * scale[:, None, :]) + _RIDGE * np.eye(p + 1)
+    root = np.einsum("cii->ci", np.linalg.cholesky(scaled)) * scale
+    variance = root[:, p] ** 2 / (count - p)
+    return (count - p) * np.log(variance) + log_det + 2.0 * np.log(root[:, :p]).sum(axis=1), variance
+
+
+def _precision(
+    t: NDArray[np.float64], correlation: NDArray[np.float64]
+) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
+    """Give the inverse correlations of the slow part, tridiagonal, one for each of c correlation times.
+
+    Returns the (c, n) elements above the diagonal, a zero last, the (c, n) diagonals, and
+    log det of each correlation.
+    """
+    apart = np.diff(t) / correlation[:, None]
+    memory = np.exp(-apart)
+    fresh = -np.expm1(-2.0 * apart)
+    diagonal = np.ones((correlation.size, t.size))
+    diagonal[:, 1:] = 1.0 / fresh
+    diagonal[:, :-1] += memory**2 / fresh
+    upper = np.zeros_like(diagonal)
+    upper[:, :-1] = -memory / fresh
+    return upper, diagonal, np.log(fresh).sum(axis=1)
 
 
 def _weighted(
-    columns: NDArray[np.float64], precision: NDArray[np.float64], share: float
-) -> tuple[NDArray[np.float64], float]:
-    """Give X' S**-1 X for S = share R + (1 - share) I, and log det S less log det R.
+    columns: NDArray[np.float64],
+    upper: NDArray[np.float64],
+    diagonal: NDArray[np.float64],
+    shares: NDArray[np.float64],
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Give X' S**-1 X for S = share R + (1 - share) I, and log det S less log det R, for each colour.
 
     S = R (share I + (1 - share) Q) with Q = R**-1 tridiagonal, so S**-1 = M**-1 Q with M
-    tridiagonal and positive definite: everything costs as much as the rows.
+    tridiagonal and positive definite: everything costs as much as the rows. The colours stand
+    one after the other in one tridiagonal system.
     """
-    by_precision = precision[1][:, None] * columns
-    by_precision[:-1] += precision[0][1:, None] * columns[1:]
-    by_precision[1:] += precision[0][1:, None] * columns[:-1]
-    if share >= 1.0:
-        return columns.T @ by_precision, 0.0
-    diagonal, below, _ = dpttrf((1.0 - share) * precision[1] + share, (1.0 - share) * precision[0][1:])
-    solved, _ = dpttrs(diagonal, below, by_precision)
-    gram = columns.T @ solved
-    return 0.5 * (gram + gram.T), float(np.sum(np.log(diagonal)))
+    count = shares.size
+    by_precision = diagonal[:, :, None] * columns
+    by_precision[:, :-1] += upper[:, :-1, None] * columns[1:]
+    by_precision[:, 1:] += upper[:, :-1, None] * columns[:-1]
+    white = (1.0 - shares)[:, None]
+    factors, below, _ = dpttrf((white * diagonal + shares[:, None]).ravel(), (white * upper).ravel()[:-1])
+    solved, _ = dpttrs(factors, below, by_precision.reshape(-1, columns.shape[1]))
+    grams = columns.T @ solved.reshape(by_precision.shape)
+    return 0.5 * (grams + grams.swapaxes(1, 2)), np.log(factors.reshape(count, -1)).sum(axis=1)
 
 
 def _half_coloured(

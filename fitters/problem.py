@@ -8,6 +8,7 @@ Pereyra 1973, with the simplified derivative of Kaufman 1975).
 from __future__ import annotations
 
 from dataclasses import replace
+from functools import cached_property
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -23,6 +24,9 @@ if TYPE_CHECKING:
 
 #: Searched logarithms beyond these leave the shapes without meaning: exp(+-40).
 _LOG_LIMIT = 40.0
+#: Rows and moves of the sketch; enough to tell good starts from bad ones.
+_SKETCHED_ROWS = 64
+_SKETCHED_MOVES = 8
 #: A regressor this small against its own size before projection tells nothing new [1].
 _NOTHING_NEW = 1e-12
 
@@ -76,22 +80,18 @@ class Problem:
         ----------
         rows : (..., m) ndarray
         """
-        return np.asarray(rows - (rows @ self._level_basis) @ self._level_basis.T)
+        flat = rows.reshape(-1, rows.shape[-1])  # one product, not a stack of small ones
+        return np.asarray(rows - ((flat @ self._level_basis) @ self._level_basis.T).reshape(rows.shape))
 
-    def sketched(self, rows: int, moves: int) -> Problem:
-        """Give a smaller problem alike: fewer rows, chatter merged, the first moves only.
-
-        Parameters
-        ----------
-        rows, moves : int
-            At most about this many.
-        """
-        held, until = self.held.condensed(moves)
+    @cached_property
+    def sketch(self) -> Problem:
+        """A smaller problem alike, for a first look: few rows, chatter merged, the first moves only."""
+        held, until = self.held.condensed(_SKETCHED_MOVES)
         inside = np.flatnonzero(self.used & (self.data.t < until))
-        if inside.size < rows:
+        if inside.size < _SKETCHED_ROWS:
             inside = np.flatnonzero(self.used)
         kept = np.zeros(self.used.size, dtype=bool)
-        kept[inside[:: max(1, inside.size // rows)]] = True
+        kept[inside[:: max(1, inside.size // _SKETCHED_ROWS)]] = True
         sketch = Problem(self.data, kept, drift=self.drift, settling=self.settling)
         sketch.held = replace(held, t=sketch.t)
         return sketch

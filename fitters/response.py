@@ -144,7 +144,7 @@ def respond(structure: Structure, held: HeldInput, search: NDArray[np.float64], 
     answer = (_superpose if few else _recur)(structure, held, search, dead_time)
     if held.settling_from is None:
         return answer
-    before = structure.shapes(held.t - held.settling_from, search)
+    before = structure.shapes(held.t - held.settling_from, list(search))
     return Response(
         value=np.concatenate([answer.value, before.value[:1]]),
         by_search=np.concatenate([answer.by_search, before.by_search[:, :1]], axis=1),
@@ -158,7 +158,7 @@ def _superpose(
     tau = held.t - (held.at[:, None] + dead_time)
     on = tau > 0.0 if structure.has_dead_time_search else tau >= 0.0
     weight = on * held.size[:, None]
-    shapes = structure.shapes(np.maximum(tau, 0.0), search)
+    shapes = structure.shapes(np.maximum(tau, 0.0), list(search))
     return Response(
         value=np.einsum("jn,rjn->rn", weight, shapes.value),
         by_search=np.einsum("jn,krjn->krn", weight, shapes.by_search),

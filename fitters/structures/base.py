@@ -11,10 +11,10 @@ from __future__ import annotations
 
 from abc import ABC, abstractmethod
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
-    from collections.abc import Iterator
+    from collections.abc import Iterator, Sequence
 
     import numpy as np
     from numpy.typing import NDArray
@@ -90,16 +90,32 @@ class Structure(ABC):
         return self.searched + self.gains + 1
 
     @abstractmethod
-    def shapes(self, tau: NDArray[np.float64], search: NDArray[np.float64]) -> Shapes:
+    def shapes(self, tau: NDArray[np.float64], search: Sequence[Any]) -> Shapes:
         """Evaluate the unit-step shapes.
 
         Parameters
         ----------
         tau : (...) ndarray
             Time since the step less the dead time [s], zero or more.
-        search : (k,) ndarray
-            The searched numbers.
+        search : sequence of k floats or arrays
+            The searched numbers; the first, a scale of time, may be an array that broadcasts with `tau`.
         """
+
+    def values(self, tau: NDArray[np.float64], search: Sequence[Any]) -> NDArray[np.float64]:
+        """Evaluate the unit-step shapes without their derivatives, at many searched numbers at once.
+
+        Parameters
+        ----------
+        tau : (...) ndarray
+            Time since the step less the dead time [s], zero or more.
+        search : sequence of k floats or arrays
+            The searched numbers; the first, a scale of time, may be an array that broadcasts with `tau`.
+
+        Returns
+        -------
+        (r, ...) ndarray
+        """
+        return self.shapes(tau, search).value
 
     @abstractmethod
     def starts(self, span: float, interval: float) -> Iterator[tuple[float, ...]]:

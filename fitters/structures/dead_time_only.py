@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -10,7 +10,7 @@ from fitters.process import ProcessModel
 from fitters.structures.base import Quantity, Shapes, Structure
 
 if TYPE_CHECKING:
-    from collections.abc import Iterator
+    from collections.abc import Iterator, Sequence
 
     from numpy.typing import NDArray
 
@@ -24,7 +24,7 @@ class DeadTimeOnly(Structure):
     integrators = 0
     has_dead_time_search = False
 
-    def shapes(self, tau: NDArray[np.float64], search: NDArray[np.float64]) -> Shapes:  # noqa: D102
+    def shapes(self, tau: NDArray[np.float64], search: Sequence[Any]) -> Shapes:  # noqa: D102
         del search
         return Shapes(np.ones_like(tau)[None], np.zeros_like(tau)[None], np.empty((0, 1, *tau.shape)))
 

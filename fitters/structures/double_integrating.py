@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -11,7 +11,7 @@ from fitters.structures import shapes
 from fitters.structures.base import Quantity, Shapes, Structure
 
 if TYPE_CHECKING:
-    from collections.abc import Iterator
+    from collections.abc import Iterator, Sequence
 
     from numpy.typing import NDArray
 
@@ -24,7 +24,7 @@ class DoubleIntegrator(Structure):
     gains = 1
     integrators = 2
 
-    def shapes(self, tau: NDArray[np.float64], search: NDArray[np.float64]) -> Shapes:  # noqa: D102
+    def shapes(self, tau: NDArray[np.float64], search: Sequence[Any]) -> Shapes:  # noqa: D102
         del search
         return shapes.double_integrator(tau)
 
@@ -53,7 +53,7 @@ class DoubleIntegratorWithLag(Structure):
     gains = 1
     integrators = 2
 
-    def shapes(self, tau: NDArray[np.float64], search: NDArray[np.float64]) -> Shapes:  # noqa: D102
+    def shapes(self, tau: NDArray[np.float64], search: Sequence[Any]) -> Shapes:  # noqa: D102
         return shapes.twice_integrated_lag(tau, search[0])
 
     def starts(self, span: float, interval: float) -> Iterator[tuple[float, ...]]:  # noqa: D102

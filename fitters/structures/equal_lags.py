@@ -2,17 +2,17 @@
 
 from __future__ import annotations
 
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
-from scipy.special import comb
+from scipy.special import comb, gammainc
 
 from fitters.process import ProcessModel
 from fitters.structures import shapes
 from fitters.structures.base import Quantity, Shapes, Structure
 
 if TYPE_CHECKING:
-    from collections.abc import Iterator
+    from collections.abc import Iterator, Sequence
 
     from numpy.typing import NDArray
 
@@ -28,8 +28,11 @@ class EqualLags(Structure):
         self.count = count
         self.name = f"{count} equal lags"
 
-    def shapes(self, tau: NDArray[np.float64], search: NDArray[np.float64]) -> Shapes:  # noqa: D102
+    def shapes(self, tau: NDArray[np.float64], search: Sequence[Any]) -> Shapes:  # noqa: D102
         return shapes.equal_lags(tau, search[0], self.count)
+
+    def values(self, tau: NDArray[np.float64], search: Sequence[Any]) -> NDArray[np.float64]:  # noqa: D102
+        return np.asarray(gammainc(self.count, tau * np.exp(-search[0]))[None])
 
     def starts(self, span: float, interval: float) -> Iterator[tuple[float, ...]]:  # noqa: D102
         for log_lag in shapes.lag_starts(span / self.count, interval, 8):

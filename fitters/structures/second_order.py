@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -11,7 +11,7 @@ from fitters.structures import shapes
 from fitters.structures.base import Quantity, Shapes, Structure
 
 if TYPE_CHECKING:
-    from collections.abc import Iterator
+    from collections.abc import Iterator, Sequence
 
     from numpy.typing import NDArray
 
@@ -27,13 +27,16 @@ class SecondOrder(Structure):
     gains = 1
     integrators = 0
 
-    def shapes(self, tau: NDArray[np.float64], search: NDArray[np.float64]) -> Shapes:  # noqa: D102
+    def shapes(self, tau: NDArray[np.float64], search: Sequence[Any]) -> Shapes:  # noqa: D102
         both = shapes.pair(tau, search[0], search[1])
         return Shapes(both.value[:1], both.by_time[:1], both.by_search[:, :1])
 
+    def values(self, tau: NDArray[np.float64], search: Sequence[Any]) -> NDArray[np.float64]:  # noqa: D102
+        return shapes.pair_values(tau, search[0], search[1])[:1]
+
     def starts(self, span: float, interval: float) -> Iterator[tuple[float, ...]]:  # noqa: D102
-        for log_time in shapes.lag_starts(span / 4.0, interval, 8):
-            for damping in _DAMPING_STARTS:
+        for damping in _DAMPING_STARTS:
+            for log_time in shapes.lag_starts(span / 4.0, interval, 8):
                 yield log_time, float(np.log(damping))
 
     def model(  # noqa: D102
@@ -59,8 +62,11 @@ class SecondOrderWithZero(Structure):
     gains = 2
     integrators = 0
 
-    def shapes(self, tau: NDArray[np.float64], search: NDArray[np.float64]) -> Shapes:  # noqa: D102
+    def shapes(self, tau: NDArray[np.float64], search: Sequence[Any]) -> Shapes:  # noqa: D102
         return shapes.pair(tau, search[0], search[1])
+
+    def values(self, tau: NDArray[np.float64], search: Sequence[Any]) -> NDArray[np.float64]:  # noqa: D102
+        return shapes.pair_values(tau, search[0], search[1])
 
     def starts(self, span: float, interval: float) -> Iterator[tuple[float, ...]]:  # noqa: D102
         yield from SecondOrder().starts(span, interval)

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from scipy.special import gammainc, gammaln
@@ -28,14 +28,14 @@ def lag_starts(span: float, interval: float, count: int) -> Iterator[float]:
     yield from np.linspace(np.log(max(1.0 * interval, span / 1000.0)), np.log(2.0 * span), count)
 
 
-def lag(tau: NDArray[np.float64], log_lag: float) -> Shapes:
+def lag(tau: NDArray[np.float64], log_lag: Any) -> Shapes:
     """Evaluate 1 / (T s + 1), searched by log T.
 
     Parameters
     ----------
     tau : (...) ndarray
         Time after the step [s], zero or more.
-    log_lag : float
+    log_lag : float or ndarray
         Natural logarithm of T in seconds.
     """
     lag_s = np.exp(log_lag)
@@ -55,14 +55,14 @@ def integrator(tau: NDArray[np.float64]) -> Shapes:
     return Shapes(tau[None], np.ones_like(tau)[None], np.empty((0, 1, *tau.shape)))
 
 
-def integrated_lag(tau: NDArray[np.float64], log_lag: float) -> Shapes:
+def integrated_lag(tau: NDArray[np.float64], log_lag: Any) -> Shapes:
     """Evaluate 1 / (s (T s + 1)), searched by log T.
 
     Parameters
     ----------
     tau : (...) ndarray
         Time after the step [s], zero or more.
-    log_lag : float
+    log_lag : float or ndarray
         Natural logarithm of T in seconds.
     """
     lag_s = np.exp(log_lag)
@@ -83,14 +83,14 @@ def double_integrator(tau: NDArray[np.float64]) -> Shapes:
     return Shapes((0.5 * tau**2)[None], tau[None], np.empty((0, 1, *tau.shape)))
 
 
-def twice_integrated_lag(tau: NDArray[np.float64], log_lag: float) -> Shapes:
+def twice_integrated_lag(tau: NDArray[np.float64], log_lag: Any) -> Shapes:
     """Evaluate 1 / (s**2 (T s + 1)), searched by log T.
 
     Parameters
     ----------
     tau : (...) ndarray
         Time after the step [s], zero or more.
-    log_lag : float
+    log_lag : float or ndarray
         Natural logarithm of T in seconds.
     """
     lag_s = np.exp(log_lag)
@@ -101,14 +101,14 @@ def twice_integrated_lag(tau: NDArray[np.float64], log_lag: float) -> Shapes:
     return Shapes(value[None], slope[None], by_log[None, None])
 
 
-def equal_lags(tau: NDArray[np.float64], log_lag: float, count: int) -> Shapes:
+def equal_lags(tau: NDArray[np.float64], log_lag: Any, count: int) -> Shapes:
     """Evaluate 1 / (T s + 1)**n, searched by log T: the regularised incomplete gamma function.
 
     Parameters
     ----------
     tau : (...) ndarray
         Time after the step [s], zero or more.
-    log_lag : float
+    log_lag : float or ndarray
         Natural logarithm of T in seconds.
     count : int
         Number of lags n.
@@ -120,14 +120,14 @@ def equal_lags(tau: NDArray[np.float64], log_lag: float, count: int) -> Shapes:
     return Shapes(value[None], (density * np.exp(-log_lag))[None], (-x * density)[None, None])
 
 
-def pair(tau: NDArray[np.float64], log_time: float, log_damping: float) -> Shapes:
+def pair(tau: NDArray[np.float64], log_time: Any, log_damping: float) -> Shapes:
     """Evaluate 1 and s over (tau0**2 s**2 + 2 zeta tau0 s + 1): two shapes.
 
     Parameters
     ----------
     tau : (...) ndarray
         Time after the step [s], zero or more.
-    log_time : float
+    log_time : float or ndarray
         Natural logarithm of tau0 = 1 / natural frequency in seconds.
     log_damping : float
         Natural logarithm of the damping zeta.
@@ -141,7 +141,8 @@ def pair(tau: NDArray[np.float64], log_time: float, log_damping: float) -> Shape
     time_s = np.exp(log_time)
     zeta = np.exp(log_damping)
     x = tau / time_s
-    even, odd, odd_by_square = _even_and_odd(x, zeta)
+    even, odd = _even_and_odd(x, zeta)
+    odd_by_square = _odd_by_square(x, zeta, even, odd)
     step = 1.0 - (even + zeta * odd)
     rate = odd  # d(step)/dx: the impulse response
     rate_by_x = even - zeta * odd
@@ -163,25 +164,60 @@ def pair(tau: NDArray[np.float64], log_time: float, log_damping: float) -> Shape
     return Shapes(value, by_time, by_search)
 
 
-def _even_and_odd(
-    x: NDArray[np.float64], zeta: float
-) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
-    """Give exp(-zeta x) times C, S and dS/d(w**2), safe from overflow and from w = 0."""
+def pair_values(tau: NDArray[np.float64], log_time: Any, log_damping: float) -> NDArray[np.float64]:
+    """Evaluate the two shapes of `pair` without their derivatives.
+
+    Parameters
+    ----------
+    tau : (...) ndarray
+        Time after the step [s], zero or more.
+    log_time : float or ndarray
+        Natural logarithm of 1 / natural frequency in seconds.
+    log_damping : float
+        Natural logarithm of the damping.
+
+    Returns
+    -------
+    (2, ...) ndarray
+    """
+    time_s = np.exp(log_time)
+    zeta = np.exp(log_damping)
+    even, odd = _even_and_odd(tau / time_s, zeta)
+    value = np.empty((2, *even.shape))
+    value[0] = 1.0 - (even + zeta * odd)
+    value[1] = odd / time_s
+    return value
+
+
+#: This near w = 0 the series are used [1]: w x is small there wherever exp(-x) still matters.
+_NEAR_CRITICAL = 1e-4
+
+
+def _even_and_odd(x: NDArray[np.float64], zeta: float) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Give exp(-zeta x) times C and S, safe from overflow and from w = 0."""
     square = zeta * zeta - 1.0
-    if abs(square) < 1e-4:  # w x is small wherever exp(-x) still matters: four terms reach 1e-12
+    if abs(square) < _NEAR_CRITICAL:  # four terms reach 1e-12
         decay = np.exp(-zeta * x)
         z = square * x * x
         even = decay * (1 + z / 2 * (1 + z / 12 * (1 + z / 30)))
         odd = decay * x * (1 + z / 6 * (1 + z / 20 * (1 + z / 42)))
-        odd_by_square = decay * x**3 / 6 * (1 + z / 10 * (1 + z / 28))
-        return even, odd, odd_by_square
+        return even, odd
     if square > 0:
         w = np.sqrt(square)
         slow = np.exp(-x / (zeta + w))  # zeta - w without cancellation
         fast = np.exp(-(zeta + w) * x)
-        even, odd = 0.5 * (slow + fast), 0.5 * (slow - fast) / w
-    else:
-        w = np.sqrt(-square)
-        decay = np.exp(-zeta * x)
-        even, odd = decay * np.cos(w * x), decay * np.sin(w * x) / w
-    return even, odd, (x * even - odd) / (2.0 * square)
+        return 0.5 * (slow + fast), 0.5 * (slow - fast) / w
+    w = np.sqrt(-square)
+    decay = np.exp(-zeta * x)
+    return decay * np.cos(w * x), decay * np.sin(w * x) / w
+
+
+def _odd_by_square(
+    x: NDArray[np.float64], zeta: float, even: NDArray[np.float64], odd: NDArray[np.float64]
+) -> NDArray[np.float64]:
+    """Give exp(-zeta x) times dS/d(w**2)."""
+    square = zeta * zeta - 1.0
+    if abs(square) < _NEAR_CRITICAL:
+        z = square * x * x
+        return np.asarray(np.exp(-zeta * x) * x**3 / 6 * (1 + z / 10 * (1 + z / 28)))
+    return (x * even - odd) / (2.0 * square)
