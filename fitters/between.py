@@ -76,9 +76,10 @@ def gains_by_move(problem: Problem, estimate: Estimate) -> GainsByMove:
         for g in range(count)
     ]
     pv = problem.data.pv[problem.used] - problem.level
-    jacobian, factors, residual = _solve([*columns, problem.levels], pv)
-    level_only = _solve([*columns, problem.levels[:, :1]], pv)
-    if level_only[2] @ level_only[2] < _NO_DRIFT * (residual @ residual):
+    root = np.sqrt(problem.weight)
+    jacobian, factors, residual = _solve([*columns, problem.levels], pv, root)
+    level_only = _solve([*columns, problem.levels[:, :1]], pv, root)
+    if np.sum((root * level_only[2]) ** 2) < _NO_DRIFT * np.sum((root * residual) ** 2):
         jacobian, factors, residual = level_only  # drift and unequal gains imitate each other
     gains = factors[:count]
     typical = float(np.median(np.abs(gains)))
@@ -92,19 +93,20 @@ def gains_by_move(problem: Problem, estimate: Estimate) -> GainsByMove:
         low = int(np.argmin(np.where(known, np.abs(gains), np.inf)))
         gap = abs(gains[high]) - abs(gains[low])
         if gap > _APART * np.mean(np.abs(gains[known])):
-            cov = covariance(jacobian, problem.t, colour(residual, problem.t, jacobian))
+            noise = colour(residual, problem.t, jacobian, problem.weight)
+            cov = covariance(jacobian, problem.t, noise, problem.weight)
             between = float(np.sqrt(max(cov[high, high] + cov[low, low] - 2.0 * cov[high, low], 0.0)))
-            explained = estimate.cost > _EXPLAINED * float(residual @ residual)
+            explained = estimate.cost > _EXPLAINED * float(np.sum((root * residual) ** 2))
             differ = bool(gap > _SURE * between or explained)
     return GainsByMove(scale=scale, differ=differ, data=_scaled(problem.data, held, scale[group]))
 
 
 def _solve(
-    columns: list[NDArray[np.float64]], pv: NDArray[np.float64]
+    columns: list[NDArray[np.float64]], pv: NDArray[np.float64], root: NDArray[np.float64]
 ) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
     """Give the columns side by side, the factors, and what they leave over."""
     jacobian = np.column_stack(columns)
-    factors = np.asarray(np.linalg.lstsq(jacobian, pv, rcond=None)[0], dtype=float)
+    factors = np.asarray(np.linalg.lstsq(root[:, None] * jacobian, root * pv, rcond=None)[0], dtype=float)
     return jacobian, factors, pv - jacobian @ factors
 
 

@@ -62,8 +62,10 @@ class Estimate:
     jacobian : (m, p) ndarray
         Derivatives of the fit at the used rows by searched numbers, dead time, gains, what
         was left of an earlier move (if fitted), offset and drift (if fitted), in this order.
+    whitened : (m, p) ndarray
+        The same with the noise's colour taken out.
     cost : float
-        Sum of squares over the used rows [PV unit squared].
+        Sum of squares over the used rows, whitened [PV unit squared].
     converged : bool
     starts, starts_agreeing : int
     rival_dead_times : tuple of float
@@ -80,6 +82,7 @@ class Estimate:
     drift: float
     residual: NDArray[np.float64]
     jacobian: NDArray[np.float64]
+    whitened: NDArray[np.float64]
     cost: float
     converged: bool
     starts: int
@@ -248,7 +251,8 @@ def _collect(problem: Problem, structure: Structure, end: End, ends: list[End], 
     scale = np.linalg.norm(linear, axis=0)
     scale[scale == 0.0] = 1.0
     pv = problem.data.pv[problem.used] - problem.level
-    factors = np.linalg.lstsq(linear / scale, pv, rcond=None)[0] / scale
+    whitened = problem.whiten((linear / scale).T).T
+    factors = np.linalg.lstsq(whitened, problem.whiten(pv), rcond=None)[0] / scale
     shaped = response.value.shape[0]
     weights, levels = factors[:shaped], factors[shaped:]
     everywhere = response
@@ -257,7 +261,8 @@ def _collect(problem: Problem, structure: Structure, end: End, ends: list[End], 
     residual = problem.data.pv - problem.level - weights @ everywhere.value - problem.levels_all @ levels
     by_search = np.einsum("r,krn->kn", weights, response.by_search)
     by_dead_time = weights @ response.by_dead_time
-    used_residual = residual[problem.used]
+    jacobian = np.column_stack([by_search.T, by_dead_time, linear])
+    left_over = problem.whiten(residual[problem.used])
     agreeing, rivals = _agreement(ends, problem)
     return Estimate(
         structure=structure,
@@ -267,8 +272,9 @@ def _collect(problem: Problem, structure: Structure, end: End, ends: list[End], 
         offset=float(levels[0] + problem.level),
         drift=float(levels[1]) if problem.drift else 0.0,
         residual=residual,
-        jacobian=np.column_stack([by_search.T, by_dead_time, linear]),
-        cost=float(used_residual @ used_residual),
+        jacobian=jacobian,
+        whitened=jacobian if problem.plain else problem.whiten(jacobian.T).T,
+        cost=float(left_over @ left_over),
         converged=end.converged,
         starts=len(ends),
         starts_agreeing=agreeing,

@@ -36,20 +36,25 @@ class BumpData:
         before ``t[0]``; before it the CO is taken to have had its first value for ever.
     co_values : (m,) ndarray
         CO from each of those times until the next [CO unit].
+    weight : (n,) ndarray
+        Logged rows that each row is the mean of [1]; ones unless the log was thinned.
     interval : float
-        Median spacing of the rows [s].
+        Closest usual spacing of the logged rows [s]: the median of the unthinned ones.
     """
 
     t: NDArray[np.float64]
     pv: NDArray[np.float64]
     co_times: NDArray[np.float64]
     co_values: NDArray[np.float64]
+    weight: NDArray[np.float64] = field(default_factory=lambda: np.ones(0))
     interval: float = field(init=False)
 
     def __post_init__(self) -> None:
-        for name in ("t", "pv", "co_times", "co_values"):
+        if self.weight.size == 0:
+            object.__setattr__(self, "weight", np.ones(np.size(self.t)))
+        for name in ("t", "pv", "co_times", "co_values", "weight"):
             object.__setattr__(self, name, frozen(getattr(self, name)))
-        if self.t.size < 8 or self.t.shape != self.pv.shape:
+        if self.t.size < 8 or not self.t.shape == self.pv.shape == self.weight.shape:
             raise ValueError("A bump needs at least 8 rows of time and PV.")
         if self.co_times.size == 0 or self.co_times.shape != self.co_values.shape:
             raise ValueError("A bump needs the CO's times and values.")
@@ -58,7 +63,9 @@ class BumpData:
         for name in ("t", "pv", "co_times", "co_values"):
             if not np.all(np.isfinite(getattr(self, name))):
                 raise ValueError("A bump must hold finite values only.")
-        object.__setattr__(self, "interval", float(np.median(np.diff(self.t))))
+        apart = np.diff(self.t)
+        single = apart[self.weight[1:] <= 1.0]
+        object.__setattr__(self, "interval", float(np.median(single if single.size else apart)))
 
     @property
     def span(self) -> float:
@@ -202,8 +209,11 @@ class Choice:
         Every structure that could be fitted, the chosen one first.
     reason : str
         Why the chosen structure stands before the next, one or two sentences.
+    data : BumpData
+        The rows the fits rest on, moves scaled to what they achieved.
     """
 
     best: Fit
     candidates: tuple[Candidate, ...]
     reason: str
+    data: BumpData

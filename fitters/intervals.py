@@ -8,7 +8,7 @@ import numpy as np
 from scipy.special import stdtrit
 
 from fitters.fit import Fit, Parameter, frozen
-from fitters.noise import covariance
+from fitters.noise import covariance, whitened_covariance
 
 if TYPE_CHECKING:
     from collections.abc import Callable
@@ -16,8 +16,8 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from fitters.estimate import Estimate
-    from fitters.fit import BumpData
     from fitters.noise import Noise
+    from fitters.problem import Problem
     from fitters.process import ProcessModel
 
 #: Probability that an interval is to hold the truth [1].
@@ -30,17 +30,14 @@ _SURE_OF_SIGN = 2.5
 _FEWEST_DEGREES = 3.0
 
 
-def to_fit(
-    estimate: Estimate, data: BumpData, used: NDArray[np.bool_], noise: Noise, criterion: float
-) -> Fit:
+def to_fit(estimate: Estimate, problem: Problem, noise: Noise, criterion: float) -> Fit:
     """Give an estimate its intervals.
 
     Parameters
     ----------
     estimate : Estimate
-    data : BumpData
-    used : (n,) bool ndarray
-        Rows that counted.
+    problem : Problem
+        What it was settled on.
     noise : Noise
         Level and colour of what the fit leaves over.
     criterion : float
@@ -50,7 +47,8 @@ def to_fit(
     -------
     Fit
     """
-    cov = _parameter_covariance(estimate, data, used, noise)
+    data, used = problem.data, problem.used
+    cov = _parameter_covariance(estimate, problem, noise)
     degrees = max(noise.effective_samples - cov.shape[0], _FEWEST_DEGREES)
     quantile = float(stdtrit(degrees, 0.5 + 0.5 * _COVERAGE))
     parameters, own = _parameters(estimate, cov, quantile, data.interval)
@@ -83,31 +81,49 @@ def to_fit(
     )
 
 
+def covariance_of(
+    estimate: Estimate, problem: Problem, noise: Noise, kept: list[int] | None = None
+) -> NDArray[np.float64]:
+    """Give the covariance of an estimate's parameters, in the order of its Jacobian.
+
+    Parameters
+    ----------
+    estimate : Estimate
+    problem : Problem
+        What it was settled on: with the noise's colour taken out, or plainly.
+    noise : Noise
+    kept : list of int or None
+        Some of the parameters, the others known; all of them if None.
+    """
+    chosen = slice(None) if kept is None else kept
+    if problem.noise.slow_share > 0.0:
+        return whitened_covariance(estimate.whitened[:, chosen], noise)
+    return covariance(estimate.jacobian[:, chosen], problem.t, noise, problem.weight)
+
+
 def _frozen_flags(used: NDArray[np.bool_]) -> NDArray[np.bool_]:
     copy = np.array(used, dtype=bool)
     copy.setflags(write=False)
     return copy
 
 
-def _parameter_covariance(
-    estimate: Estimate, data: BumpData, used: NDArray[np.bool_], noise: Noise
-) -> NDArray[np.float64]:
+def _parameter_covariance(estimate: Estimate, problem: Problem, noise: Noise) -> NDArray[np.float64]:
     """Covariance of (searched, dead time, gains), level and drift marginalised."""
     k, r = estimate.structure.searched, estimate.structure.gains
     if estimate.dead_time_fixed:  # held at zero or known to a row: its own spread is added below
         kept = [i for i in range(estimate.jacobian.shape[1]) if i != k]
     else:
         kept = list(range(estimate.jacobian.shape[1]))
-    inner = covariance(estimate.jacobian[:, kept], data.t[used], noise)
+    inner = covariance_of(estimate, problem, noise, kept)
     full = np.zeros((estimate.jacobian.shape[1],) * 2)
     full[np.ix_(kept, kept)] = inner
     if estimate.dead_time_fixed:
         if estimate.structure.has_dead_time_search:
             # at the bound: the spread it would have were it free, as one-sided as it really is
-            free = covariance(estimate.jacobian, data.t[used], noise)
+            free = covariance_of(estimate, problem, noise)
             full[k, k] = free[k, k]
         else:  # anywhere between two rows alike: a rectangular distribution (JCGM 100:2008, 4.3.7)
-            full[k, k] = data.interval**2 / 12.0
+            full[k, k] = problem.data.interval**2 / 12.0
     return full[: k + 1 + r, : k + 1 + r]
 
 

@@ -14,10 +14,12 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
-from scipy.linalg import solve_banded
-from scipy.linalg.lapack import dpttrf, dpttrs
+from scipy.linalg import cholesky_banded, solve_banded
+from scipy.linalg.lapack import dpttrf, dpttrs, dtbtrs
 
 if TYPE_CHECKING:
+    from collections.abc import Callable
+
     from numpy.typing import NDArray
 
 #: A residual this many robust standard deviations from its neighbours is set aside [1].
@@ -67,7 +69,16 @@ class Noise:
     effective_samples: float
 
 
-def colour(residual: NDArray[np.float64], t: NDArray[np.float64], jacobian: NDArray[np.float64]) -> Noise:
+#: Noise without colour, its level not known.
+WHITE = Noise(sd=1.0, correlation=0.0, slow_share=0.0, effective_samples=1.0)
+
+
+def colour(
+    residual: NDArray[np.float64],
+    t: NDArray[np.float64],
+    jacobian: NDArray[np.float64],
+    weight: NDArray[np.float64],
+) -> Noise:
     """Estimate level and colour of the noise behind a residual.
 
     Parameters
@@ -78,36 +89,41 @@ def colour(residual: NDArray[np.float64], t: NDArray[np.float64], jacobian: NDAr
         Times of the rows [s].
     jacobian : (n, p) ndarray
         Derivatives of the fit by its p parameters.
+    weight : (n,) ndarray
+        Logged rows each row is the mean of [1].
 
     Returns
     -------
     Noise
+        Of a single logged row.
     """
-    count = residual.size
-    if count <= jacobian.shape[1] + 2 or not np.any(residual):
-        return Noise(sd=0.0, correlation=0.0, slow_share=0.0, effective_samples=float(count))
-    stride = max(1, count // _COLOUR_ROWS)
-    size = float(np.linalg.norm(residual[::stride]))
-    columns = np.column_stack([_spanned(jacobian)[::stride], residual[::stride] / size])
-    times = t[::stride]
+    logged = float(np.sum(weight))
+    if residual.size <= jacobian.shape[1] + 2 or not np.any(residual):
+        return Noise(sd=0.0, correlation=0.0, slow_share=0.0, effective_samples=logged)
+    stride = max(1, residual.size // _COLOUR_ROWS)
+    root = np.sqrt(weight)
+    size = float(np.linalg.norm((root * residual)[::stride]))
+    basis = _spanned(root[:, None] * jacobian)[::stride]
+    columns = np.column_stack([basis, (root * residual)[::stride] / size])
     white, variance = _white_deviance(columns)
-    found = _search(columns, times)
+    found = _search(columns, t[::stride], weight[::stride])
     if found is None or white - found[0] < _COLOUR_GAIN:
         sd = size * float(np.sqrt(variance))
-        return Noise(sd=sd, correlation=0.0, slow_share=0.0, effective_samples=float(count))
+        return Noise(sd=sd, correlation=0.0, slow_share=0.0, effective_samples=logged)
     _, correlation, share, variance = found
-    ones = np.ones((count, 1))
-    spread = share * float(np.sum(_half_coloured(ones, t, correlation) ** 2)) + (1.0 - share) * count
+    spread = share * float(np.sum(_half_coloured(weight[:, None], t, correlation) ** 2))
     return Noise(
         sd=size * float(np.sqrt(variance)),
         correlation=correlation,
         slow_share=share,
-        effective_samples=float(count**2 / spread),
+        effective_samples=logged**2 / (spread + (1.0 - share) * logged),
     )
 
 
-def covariance(jacobian: NDArray[np.float64], t: NDArray[np.float64], noise: Noise) -> NDArray[np.float64]:
-    """Give the covariance of a least-squares estimate under coloured noise.
+def covariance(
+    jacobian: NDArray[np.float64], t: NDArray[np.float64], noise: Noise, weight: NDArray[np.float64]
+) -> NDArray[np.float64]:
+    """Give the covariance of a plain least-squares estimate under coloured noise.
 
     Parameters
     ----------
@@ -116,6 +132,8 @@ def covariance(jacobian: NDArray[np.float64], t: NDArray[np.float64], noise: Noi
     t : (n,) ndarray
         Times of the rows [s].
     noise : Noise
+    weight : (n,) ndarray
+        Logged rows each row is the mean of [1].
 
     Returns
     -------
@@ -123,16 +141,45 @@ def covariance(jacobian: NDArray[np.float64], t: NDArray[np.float64], noise: Noi
         sd**2 (J'J)**-1 J'R J (J'J)**-1 with R the noise's correlation; infinite variances
         where the rows do not determine a parameter.
     """
+    root = np.sqrt(weight)[:, None]
+
+    def middle(u: NDArray[np.float64]) -> NDArray[np.float64]:
+        half = _half_coloured(root * u, t, noise.correlation)
+        return noise.slow_share * (half.T @ half) + (1.0 - noise.slow_share) * np.eye(u.shape[1])
+
+    return _covariance(root * jacobian, noise.sd, middle if noise.slow_share > 0.0 else None)
+
+
+def whitened_covariance(whitened: NDArray[np.float64], noise: Noise) -> NDArray[np.float64]:
+    """Give the covariance of a least-squares estimate made on whitened rows.
+
+    Parameters
+    ----------
+    whitened : (n, p) ndarray
+        Derivatives of the fit by its parameters, whitened.
+    noise : Noise
+
+    Returns
+    -------
+    (p, p) ndarray
+        sd**2 (J'J)**-1 (Gauss, Markov; Aitken 1936); infinite variances where the rows do
+        not determine a parameter.
+    """
+    return _covariance(whitened, noise.sd, None)
+
+
+def _covariance(
+    jacobian: NDArray[np.float64],
+    sd: float,
+    middle_of: Callable[[NDArray[np.float64]], NDArray[np.float64]] | None,
+) -> NDArray[np.float64]:
     scale = np.linalg.norm(jacobian, axis=0)
     scale[scale == 0.0] = 1.0
     u, s, vt = np.linalg.svd(jacobian / scale, full_matrices=False)
     blind = s < _BLIND * s[0]
     inverse = vt.T / np.where(blind, np.inf, s)
-    middle = np.eye(s.size)
-    if noise.slow_share > 0.0:
-        half = _half_coloured(u, t, noise.correlation)
-        middle = noise.slow_share * (half.T @ half) + (1.0 - noise.slow_share) * middle
-    cov = noise.sd**2 * (inverse @ middle @ inverse.T)
+    cov = inverse @ inverse.T if middle_of is None else inverse @ middle_of(u) @ inverse.T
+    cov *= sd**2
     if np.any(blind):
         lost = np.any(np.abs(vt[blind]) > 1e-6, axis=0)
         cov[lost, :] = 0.0
@@ -141,26 +188,52 @@ def covariance(jacobian: NDArray[np.float64], t: NDArray[np.float64], noise: Noi
     return cov / np.outer(scale, scale)
 
 
-def whitened_sum(residual: NDArray[np.float64], t: NDArray[np.float64], noise: Noise) -> float:
-    """Sum the squares of a residual after its colour is taken out [PV unit squared].
+class Whitener:
+    """What makes the noise of all rows white and alike: W with W' W = S**-1, S its correlation.
+
+    S = share R + (1 - share) D, with R the slow part's correlation and D = 1 / weight. With
+    R**-1 = B' B, B bidiagonal, S = B**-1 (share I + (1 - share) B D B') B'**-1, and the
+    tridiagonal in the middle has a bidiagonal factor C: W = C**-1 B.
 
     Parameters
     ----------
-    residual : (n,) ndarray
     t : (n,) ndarray
         Times of the rows [s].
     noise : Noise
         Its colour counts, its level does not.
-
-    Returns
-    -------
-    float
-        e' R**-1 e, R being the noise's correlation.
+    weight : (n,) ndarray
+        Logged rows each row is the mean of [1].
     """
-    if noise.slow_share <= 0.0:
-        return float(residual @ residual)
-    upper, diagonal, _ = _precision(t, np.array([noise.correlation]))
-    return float(_weighted(residual[:, None], upper, diagonal, np.array([noise.slow_share]))[0][0, 0, 0])
+
+    def __init__(self, t: NDArray[np.float64], noise: Noise, weight: NDArray[np.float64]) -> None:
+        self._root: NDArray[np.float64] | None = None
+        if noise.slow_share <= 0.0:
+            self._root = np.sqrt(weight)
+            return
+        apart = np.diff(t) / noise.correlation
+        sharp = np.sqrt(-np.expm1(-2.0 * apart))
+        self._diagonal = np.concatenate([[1.0], 1.0 / sharp])
+        self._below = -np.exp(-apart) / sharp
+        white = 1.0 - noise.slow_share
+        middle = noise.slow_share + white * self._diagonal**2 / weight
+        middle[1:] += white * self._below**2 / weight[:-1]
+        beside = white * self._diagonal[:-1] * self._below / weight[:-1]
+        self._factor = cholesky_banded(np.vstack([middle, np.append(beside, 0.0)]), lower=True)
+
+    def __call__(self, rows: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Whiten rows of values.
+
+        Parameters
+        ----------
+        rows : (..., n) ndarray
+        """
+        if self._root is not None:
+            return self._root * rows
+        sharpened = self._diagonal * rows
+        sharpened[..., 1:] += self._below * rows[..., :-1]
+        flat = sharpened.reshape(-1, rows.shape[-1])
+        solved, _ = dtbtrs(self._factor, flat.T, uplo="L")
+        return np.asarray(solved.T.reshape(rows.shape))
 
 
 def outliers(residual: NDArray[np.float64], resolution: float) -> NDArray[np.bool_]:
@@ -196,7 +269,9 @@ def _spanned(jacobian: NDArray[np.float64]) -> NDArray[np.float64]:
     return np.asarray(u[:, s > _BLIND * s[0]])
 
 
-def _search(columns: NDArray[np.float64], t: NDArray[np.float64]) -> tuple[float, float, float, float] | None:
+def _search(
+    columns: NDArray[np.float64], t: NDArray[np.float64], weight: NDArray[np.float64]
+) -> tuple[float, float, float, float] | None:
     """Find deviance, correlation time, slow share and variance at the likelihood's top."""
     low = np.log(_SHORTEST_CORRELATION * float(np.median(np.diff(t))))
     high = np.log(_LONGEST_CORRELATION * float(t[-1] - t[0]))
@@ -206,13 +281,13 @@ def _search(columns: NDArray[np.float64], t: NDArray[np.float64]) -> tuple[float
         a.ravel() for a in np.meshgrid(np.linspace(low, high, _CORRELATION_GRID), _SHARES, indexing="ij")
     )
     step, reach = (high - low) / (_CORRELATION_GRID - 1), 0.5
-    best, log_time, share, variance = _lowest(columns, t, times, shares)
+    best, log_time, share, variance = _lowest(columns, t, weight, times, shares)
     # A short pattern search: the deviance is flat at its bottom, so three halvings suffice.
     for _ in range(3):
         step, reach = 0.5 * step, 0.5 * reach
         less, more = share * (1.0 - reach), 1.0 - (1.0 - share) * (1.0 - reach)
         times = np.clip(log_time + step * np.array([-1.0, 1.0, 0.0, 0.0, 1.0, -1.0]), low, high)
-        found = _lowest(columns, t, times, np.array([share, share, less, more, less, more]))
+        found = _lowest(columns, t, weight, times, np.array([share, share, less, more, less, more]))
         if found[0] < best:
             best, log_time, share, variance = found
     return best, float(np.exp(log_time)), share, variance
@@ -226,6 +301,7 @@ def _white_deviance(columns: NDArray[np.float64]) -> tuple[float, float]:
 def _lowest(
     columns: NDArray[np.float64],
     t: NDArray[np.float64],
+    weight: NDArray[np.float64],
     log_times: NDArray[np.float64],
     shares: NDArray[np.float64],
 ) -> tuple[float, float, float, float]:
@@ -234,6 +310,9 @@ def _lowest(
     Returns it with its log correlation time, slow share and variance.
     """
     upper, diagonal, log_det = _precision(t, np.exp(log_times))
+    root = np.sqrt(weight)
+    upper[:, :-1] /= root[1:] * root[:-1]
+    diagonal /= weight
     grams, more = _weighted(columns, upper, diagonal, shares)
     deviance, variance = _from_grams(grams, log_det + more, columns.shape[0])
     best = int(np.argmin(deviance))
@@ -278,6 +357,8 @@ def _weighted(
     shares: NDArray[np.float64],
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """Give X' S**-1 X for S = share R + (1 - share) I, and log det S less log det R, for each colour.
+
+    R is that of the rows as weighted: slow noise stays as large as it is where rows are means of many.
 
     S = R (share I + (1 - share) Q) with Q = R**-1 tridiagonal, so S**-1 = M**-1 Q with M
     tridiagonal and positive definite: everything costs as much as the rows. The colours stand

@@ -13,12 +13,14 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from fitters.noise import WHITE, Whitener
 from fitters.response import HeldInput, respond
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from fitters.fit import BumpData
+    from fitters.noise import Noise
     from fitters.response import Response
     from fitters.structures.base import Structure
 
@@ -43,11 +45,14 @@ class Problem:
         Fit a straight-line drift besides the level.
     settling : bool
         Fit what was left of an earlier move when the record began.
+    noise : Noise
+        Colour that the rows are freed of before they are fitted.
 
     Attributes
     ----------
-    t, pv : (m,) ndarray
-        Times [s] and PV without level and drift, in spreads of the PV, at the used rows.
+    t, weight, pv : (m,) ndarray
+        Times [s], logged rows per row [1], and PV whitened, without level and drift, in
+        spreads of the PV, at the used rows.
     held, held_all : HeldInput
         The CO seen at the used rows, and at all of them.
     levels, levels_all : (m, 1 or 2), (n, 1 or 2) ndarray
@@ -56,30 +61,78 @@ class Problem:
         Dead times beyond this leave too few rows to see an answer [s].
     """
 
-    def __init__(self, data: BumpData, used: NDArray[np.bool_], *, drift: bool, settling: bool) -> None:
+    def __init__(
+        self,
+        data: BumpData,
+        used: NDArray[np.bool_],
+        *,
+        drift: bool,
+        settling: bool,
+        noise: Noise = WHITE,
+    ) -> None:
         self.data = data
         self.used = used
         self.drift = drift
         self.settling = settling
+        self.noise = noise
         self.held_all = HeldInput.from_data(data, settling=settling)
         self.held = self.held_all.at_rows(used)
         self.t = data.t[used]
+        self.weight = data.weight[used]
         self.levels = _levels(self.t - data.t[0], drift=drift)
         self.levels_all = _levels(data.t - data.t[0], drift=drift)
-        self._level_basis = np.linalg.qr(self.levels)[0]
+        self.plain = noise.slow_share <= 0.0 and bool(np.all(self.weight == 1.0))
+        self._whitener = Whitener(self.t, noise, self.weight)
+        self._level_basis = np.linalg.qr(self.whiten(self.levels.T).T)[0]
         self.level = float(np.mean(data.pv[used]))
         spread = float(np.std(data.pv[used]))
         self.pv = self.without_level((data.pv[used] - self.level) / (spread if spread > 0 else 1.0))
         moved_at = float(self.held.at[0]) if self.held.at.size else float(data.t[0])
         self.longest_dead_time = max(float(data.t[-1]) - moved_at - 4.0 * data.interval, data.interval)
 
-    def without_level(self, rows: NDArray[np.float64]) -> NDArray[np.float64]:
-        """Take offset and drift out of rows of values.
+    def changed(
+        self,
+        *,
+        data: BumpData | None = None,
+        used: NDArray[np.bool_] | None = None,
+        drift: bool | None = None,
+        settling: bool | None = None,
+        noise: Noise | None = None,
+    ) -> Problem:
+        """Give the same problem with something changed.
+
+        Parameters
+        ----------
+        data : BumpData or None
+        used : (n,) bool ndarray or None
+        drift, settling : bool or None
+        noise : Noise or None
+        """
+        return Problem(
+            self.data if data is None else data,
+            self.used if used is None else used,
+            drift=self.drift if drift is None else drift,
+            settling=self.settling if settling is None else settling,
+            noise=self.noise if noise is None else noise,
+        )
+
+    def whiten(self, rows: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Make the noise in rows of values white and of one size.
 
         Parameters
         ----------
         rows : (..., m) ndarray
         """
+        return rows if self.plain else self._whitener(rows)
+
+    def without_level(self, rows: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Whiten rows of values and take offset and drift out of them.
+
+        Parameters
+        ----------
+        rows : (..., m) ndarray
+        """
+        rows = self.whiten(rows)
         flat = rows.reshape(-1, rows.shape[-1])  # one product, not a stack of small ones
         return np.asarray(rows - ((flat @ self._level_basis) @ self._level_basis.T).reshape(rows.shape))
 
@@ -92,7 +145,7 @@ class Problem:
             inside = np.flatnonzero(self.used)
         kept = np.zeros(self.used.size, dtype=bool)
         kept[inside[:: max(1, inside.size // _SKETCHED_ROWS)]] = True
-        sketch = Problem(self.data, kept, drift=self.drift, settling=self.settling)
+        sketch = self.changed(used=kept)
         sketch.held = replace(held, t=sketch.t)
         return sketch
 

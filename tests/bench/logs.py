@@ -2,6 +2,8 @@
 
 import numpy as np
 
+from fitters.fit import BumpData
+
 
 def bump_log(model, *, span, rows, noise, seed, level=50.0):
     """Three moves held unequally; noise as a share of the largest answer.
@@ -24,3 +26,9 @@ def write_csv(path, t, co, pv):
     lines = ["Time (s),CO (%),PV (degC)"]
     lines += [f"{a:.6g},{b:.6g},{c:.8g}" for a, b, c in zip(t, co, pv, strict=True)]
     path.write_text("\n".join(lines) + "\n", encoding="utf-8")
+
+
+def log_data(t, co, pv):
+    """Give the log as the fitters take it."""
+    new = np.concatenate([[True], np.diff(co) != 0.0])
+    return BumpData(t=t, pv=pv, co_times=t[new], co_values=co[new])

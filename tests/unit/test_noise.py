@@ -3,9 +3,10 @@
 import numpy as np
 import pytest
 
-from fitters.noise import Noise, colour, covariance, outliers, whitened_sum
+from fitters.noise import Noise, Whitener, colour, covariance, outliers, whitened_covariance
 
 T = np.arange(400) * 0.5
+ALIKE = np.ones(T.size)
 LINE = np.column_stack([np.ones(T.size), T])
 
 
@@ -25,7 +26,7 @@ def left_over(noise, jacobian=LINE):
 
 def test_white_noise_is_nearly_always_called_nearly_white():
     worth = [
-        colour(left_over(np.random.default_rng(s).normal(size=T.size)), T, LINE).effective_samples
+        colour(left_over(np.random.default_rng(s).normal(size=T.size)), T, LINE, ALIKE).effective_samples
         for s in range(60)
     ]
     assert np.median(worth) > 0.9 * T.size
@@ -39,7 +40,7 @@ def test_slow_noise_is_found_at_its_time_and_level(correlation, white):
     for s in range(40):
         rng = np.random.default_rng(s)
         mixed = np.sqrt(1 - white) * slow_noise(rng, correlation) + np.sqrt(white) * rng.normal(size=T.size)
-        found.append(colour(left_over(mixed), T, LINE))
+        found.append(colour(left_over(mixed), T, LINE, ALIKE))
     slow = [n for n in found if n.correlation > 0.0]
     assert len(slow) >= 36
     assert correlation / 2 < np.median([n.correlation for n in slow]) < correlation * 2
@@ -50,7 +51,7 @@ def test_effective_samples_follow_the_published_ratio():
     """Bayley and Hammersley (1946): n (1 - phi) / (1 + phi) for long records."""
     phi = 0.6
     noise = Noise(sd=1.0, correlation=-0.5 / np.log(phi), slow_share=1.0, effective_samples=0.0)
-    mean_variance = covariance(np.ones((T.size, 1)), T, noise)[0, 0]
+    mean_variance = covariance(np.ones((T.size, 1)), T, noise, ALIKE)[0, 0]
     assert 1.0 / mean_variance == pytest.approx(T.size * (1 - phi) / (1 + phi), rel=0.01)
 
 
@@ -61,7 +62,7 @@ def test_the_mean_of_the_published_series_has_the_published_interval():
     """
     phi, variance = 0.6, 2.0 / (1.0 - 0.36)
     noise = Noise(sd=np.sqrt(variance), correlation=-1.0 / np.log(phi), slow_share=1.0, effective_samples=0.0)
-    sd = np.sqrt(covariance(np.ones((100, 1)), np.arange(100.0), noise)[0, 0])
+    sd = np.sqrt(covariance(np.ones((100, 1)), np.arange(100.0), noise, np.ones(100))[0, 0])
     assert 0.271 - 1.96 * sd == pytest.approx(-0.415, abs=2e-3)
     assert 0.271 + 1.96 * sd == pytest.approx(0.957, abs=2e-3)
 
@@ -77,14 +78,14 @@ def test_covariance_is_what_scatter_shows():
         r = np.random.default_rng(s)
         e = np.sqrt(0.6) * slow_noise(r, 8.0, t) + np.sqrt(0.4) * r.normal(size=t.size)
         estimates.append(np.linalg.lstsq(jacobian, e, rcond=None)[0])
-    claimed = np.sqrt(np.diag(covariance(jacobian, t, noise)))
+    claimed = np.sqrt(np.diag(covariance(jacobian, t, noise, np.ones(t.size))))
     assert np.allclose(np.std(estimates, axis=0), claimed, rtol=0.1)
 
 
 def test_a_parameter_the_rows_do_not_tell_has_no_finite_error():
     jacobian = np.column_stack([np.ones(T.size), T, 2.0 * T])
     noise = Noise(sd=1.0, correlation=0.0, slow_share=0.0, effective_samples=400.0)
-    sd = np.sqrt(np.diag(covariance(jacobian, T, noise)))
+    sd = np.sqrt(np.diag(covariance(jacobian, T, noise, ALIKE)))
     assert np.isfinite(sd[0]) and np.isinf(sd[1]) and np.isinf(sd[2])
 
 
@@ -94,8 +95,39 @@ def test_whitening_gives_back_the_number_of_rows():
     for s in range(50):
         rng = np.random.default_rng(s)
         e = np.sqrt(0.7) * slow_noise(rng, 5.0) + np.sqrt(0.3) * rng.normal(size=T.size)
-        sums.append(whitened_sum(e, T, noise))
+        sums.append(np.sum(Whitener(T, noise, ALIKE)(e) ** 2))
     assert np.mean(sums) == pytest.approx(T.size, rel=0.05)
+
+
+def test_means_of_rows_tell_what_the_rows_told():
+    """Whitened rows of means, each of several logged rows, have unit noise too."""
+    noise = Noise(sd=1.0, correlation=40.0, slow_share=0.5, effective_samples=0.0)
+    sizes = np.tile([1, 2, 5, 8], 25)
+    edges = np.concatenate([[0], np.cumsum(sizes)])
+    t = np.arange(edges[-1]) * 0.1
+    mean = lambda x: np.add.reduceat(x, edges[:-1]) / sizes  # noqa: E731
+    sums = []
+    for s in range(60):
+        rng = np.random.default_rng(s)
+        e = np.sqrt(0.5) * slow_noise(rng, 40.0, t) + np.sqrt(0.5) * rng.normal(size=t.size)
+        sums.append(np.mean(Whitener(mean(t), noise, sizes.astype(float))(mean(e)) ** 2))
+    assert np.mean(sums) == pytest.approx(1.0, rel=0.05)
+
+
+def test_least_squares_on_whitened_rows_scatters_as_claimed_and_less_than_plain():
+    """Aitken (1936): no linear unbiased estimate scatters less."""
+    t = np.arange(300.0)
+    jacobian = np.column_stack([np.ones(t.size), 1 - np.exp(-np.maximum(t - 50.0, 0.0) / 20)])
+    noise = Noise(sd=1.0, correlation=15.0, slow_share=0.9, effective_samples=0.0)
+    whiten = Whitener(t, noise, np.ones(t.size))
+    estimates = []
+    for s in range(600):
+        r = np.random.default_rng(s)
+        e = np.sqrt(0.9) * slow_noise(r, 15.0, t) + np.sqrt(0.1) * r.normal(size=t.size)
+        estimates.append(np.linalg.lstsq(whiten(jacobian.T).T, whiten(e), rcond=None)[0])
+    claimed = np.sqrt(np.diag(whitened_covariance(whiten(jacobian.T).T, noise)))
+    assert np.allclose(np.std(estimates, axis=0), claimed, rtol=0.1)
+    assert np.all(claimed < np.sqrt(np.diag(covariance(jacobian, t, noise, np.ones(t.size)))))
 
 
 def test_spikes_are_found_and_steps_are_not():
@@ -108,4 +140,4 @@ def test_spikes_are_found_and_steps_are_not():
 
 
 def test_a_perfect_fit_has_no_noise():
-    assert colour(np.zeros(T.size), T, LINE).sd == 0.0
+    assert colour(np.zeros(T.size), T, LINE, ALIKE).sd == 0.0

@@ -1,0 +1,161 @@
+"""What a test needs before structures are compared: each step looks, and changes the problem if it must.
+
+An unsettled start is fitted with the rest, rows that stand apart are set aside, and moves
+that were not answered alike are scaled to what they achieved.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from fitters.between import gains_by_move
+from fitters.estimate import as_screened, screen
+from fitters.noise import outliers
+from fitters.problem import Problem
+from fitters.structures import all_structures, structure_named
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+    from fitters.between import GainsByMove
+    from fitters.estimate import Estimate, Screened
+    from fitters.fit import BumpData
+
+#: Residuals below this share of the PV's range are arithmetic, not noise [1].
+ARITHMETIC = 1e-9
+#: What was left of an earlier move must improve twice the log likelihood by this much: twice
+#: its cost in parameters for a few hundred rows, since it is looked for unasked.
+_SETTLING_GAIN = 25.0
+#: ... in a baseline of at least so many rows that fits this many times worse than the rest [1].
+_BASELINE_ROWS = 5
+_BASELINE_WORSE = 2.0
+#: ... and over which the PV goes by at least this share of its whole range [1].
+_BASELINE_MOVED = 0.05
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Prepared:
+    """A test ready for its structures.
+
+    Attributes
+    ----------
+    problem : Problem
+    screened : tuple of Screened
+        Every structure after a quick look, closest first.
+    notes : tuple of (str, str)
+        Code and sentence for what was changed.
+    """
+
+    problem: Problem
+    screened: tuple[Screened, ...]
+    notes: tuple[tuple[str, str], ...]
+
+
+def prepare(data: BumpData) -> Prepared:
+    """Look at a test for what would spoil its fit, and allow for it.
+
+    Parameters
+    ----------
+    data : BumpData
+        With at least one move of the CO.
+
+    Returns
+    -------
+    Prepared
+    """
+    problem = Problem(data, np.ones(data.t.size, dtype=bool), drift=True, settling=False)
+    problem, screened, apart = _prepared(problem)
+    problem, screened, moves = _with_own_gains(problem, screened)
+    return Prepared(problem=problem, screened=tuple(screened), notes=_notes(apart, problem.settling, moves))
+
+
+def _prepared(problem: Problem) -> tuple[Problem, list[Screened], NDArray[np.bool_]]:
+    """Screen all structures, having dealt with an unsettled start and with outliers on the way."""
+    screened = _screen_all(problem)
+    closest = as_screened(problem, screened[0])
+    if _still_settling(problem, screened, closest):
+        problem = problem.changed(settling=True)
+        screened = _screen_all(problem)
+        closest = as_screened(problem, screened[0])
+    apart = outliers(closest.residual, ARITHMETIC * float(np.ptp(problem.data.pv)))
+    if np.any(apart):
+        problem = problem.changed(used=~apart)
+        screened = _screen_all(problem)
+    return problem, screened, apart
+
+
+def _with_own_gains(
+    problem: Problem, screened: list[Screened]
+) -> tuple[Problem, list[Screened], GainsByMove]:
+    """Scale the moves to what they achieved, where they were not answered alike.
+
+    Lags and dead time that one gain has spoilt spoil the gains too, so this is done twice,
+    each time against the moves as logged.
+    """
+    moves = gains_by_move(problem, as_screened(problem, _simplest(screened)))
+    if not moves.differ:
+        return problem, screened, moves
+    scaled = problem.changed(data=moves.data)
+    better = as_screened(scaled, _simplest(_screen_all(scaled)))
+    second = gains_by_move(problem, better)
+    moves = replace(second, differ=True)
+    scaled = problem.changed(data=moves.data)
+    return scaled, _screen_all(scaled), moves
+
+
+def _simplest(screened: list[Screened]) -> Screened:
+    """Give the closest of the structures with one gain and one searched number at most."""
+    return next(s for s in screened if s.structure.gains == 1 and s.structure.searched <= 1)
+
+
+def _screen_all(problem: Problem) -> list[Screened]:
+    """Look at every structure quickly, closest to the log first."""
+    return screen(problem, all_structures())
+
+
+def _still_settling(problem: Problem, screened: list[Screened], closest: Estimate) -> bool:
+    """Tell whether the record began before an earlier move had died away.
+
+    Its baseline must fit clearly worse than the rest, and much better with the leftover fitted.
+    """
+    before = problem.t < problem.held.at[0]
+    residual = closest.residual[problem.used]
+    if np.count_nonzero(before) < _BASELINE_ROWS or np.count_nonzero(~before) < _BASELINE_ROWS:
+        return False
+    if np.mean(residual[before] ** 2) < _BASELINE_WORSE**2 * np.mean(residual[~before] ** 2):
+        return False
+    baseline = problem.data.pv[problem.used][before]
+    third = max(baseline.size // 3, 1)
+    moved = abs(float(np.median(baseline[-third:]) - np.median(baseline[:third])))
+    if moved < _BASELINE_MOVED * float(np.ptp(problem.data.pv)):
+        return False
+    settling = problem.changed(settling=True)
+    tried = {screened[0].structure.name: screened[0].structure, "first order": structure_named("first order")}
+    cost = screen(settling, list(tried.values()))[0].cost
+    rows = problem.pv.size
+    floor = rows * ARITHMETIC**2
+    return bool(rows * np.log(max(screened[0].cost, floor) / max(cost, floor)) > _SETTLING_GAIN)
+
+
+def _notes(apart: NDArray[np.bool_], settling: bool, moves: GainsByMove) -> tuple[tuple[str, str], ...]:
+    notes = []
+    count = int(np.count_nonzero(apart))
+    if count:
+        notes.append(("outliers", f"{count} rows stand apart from their neighbours and were set aside."))
+    if moves.differ:
+        shares = ", ".join(f"{100 * share:.0f} %" for share in moves.scale)
+        notes.append(
+            (
+                "gain-differs-between-moves",
+                f"The moves were not answered alike: {shares} of the largest gain, in their order. "
+                "The largest gain is used, which is the safe one; expect slower control elsewhere.",
+            )
+        )
+    if settling:
+        notes.append(
+            ("still-settling", "The PV was still settling when the record began; that was fitted with it.")
+        )
+    return tuple(notes)
