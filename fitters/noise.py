@@ -38,13 +38,11 @@ _CORRELATION_GRID = 8
 _SHARES = np.array([0.15, 0.5, 1.0])
 #: Slow noise must improve twice the log likelihood by this much: little, since missing
 #: it costs more than imagining it.
-_COLOUR_GAIN = 1.0
+_COLOUR_GAIN = 2.0
 #: Directions this weak against the strongest are not told by the rows [1].
 _BLIND = 1e-10
 #: What keeps a residual that lies in the fit's own span from a division by nothing [1].
 _RIDGE = 1e-13
-#: Rows the colour is estimated from; more add nothing but time.
-_COLOUR_ROWS = 1500
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -100,13 +98,11 @@ def colour(
     logged = float(np.sum(weight))
     if residual.size <= jacobian.shape[1] + 2 or not np.any(residual):
         return Noise(sd=0.0, correlation=0.0, slow_share=0.0, effective_samples=logged)
-    stride = max(1, residual.size // _COLOUR_ROWS)
     root = np.sqrt(weight)
-    size = float(np.linalg.norm((root * residual)[::stride]))
-    basis = _spanned(root[:, None] * jacobian)[::stride]
-    columns = np.column_stack([basis, (root * residual)[::stride] / size])
+    size = float(np.linalg.norm(root * residual))
+    columns = np.column_stack([_spanned(root[:, None] * jacobian), root * residual / size])
     white, variance = _white_deviance(columns)
-    found = _search(columns, t[::stride], weight[::stride])
+    found = _search(columns, t, weight)
     if found is None or white - found[0] < _COLOUR_GAIN:
         sd = size * float(np.sqrt(variance))
         return Noise(sd=sd, correlation=0.0, slow_share=0.0, effective_samples=logged)
@@ -313,6 +309,7 @@ def _lowest(
     root = np.sqrt(weight)
     upper[:, :-1] /= root[1:] * root[:-1]
     diagonal /= weight
+    log_det = log_det + float(np.sum(np.log(weight)))
     grams, more = _weighted(columns, upper, diagonal, shares)
     deviance, variance = _from_grams(grams, log_det + more, columns.shape[0])
     best = int(np.argmin(deviance))

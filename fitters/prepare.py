@@ -16,6 +16,7 @@ from fitters.estimate import as_screened, screen
 from fitters.noise import outliers
 from fitters.problem import Problem
 from fitters.structures import all_structures, structure_named
+from fitters.thin import thinned
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -66,6 +67,7 @@ def prepare(data: BumpData) -> Prepared:
     -------
     Prepared
     """
+    data = thinned(data)
     problem = Problem(data, np.ones(data.t.size, dtype=bool), drift=True, settling=False)
     problem, screened, apart = _prepared(problem)
     problem, screened, moves = _with_own_gains(problem, screened)
