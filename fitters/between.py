@@ -32,6 +32,8 @@ _SURE = 4.0
 _EXPLAINED = 2.0
 #: A drift must explain what unequal gains leave over down to one part in this to be believed beside them [1].
 _NO_DRIFT = 1.5
+#: Gains this share of the lost part away from what a dead band would give are not explained by it [1].
+_DEAD_BAND_FITS = 0.25
 #: A move with less than this share of the typical gain, or of the other sign, was not answered at all [1].
 _SEEN = 0.2
 
@@ -46,12 +48,19 @@ class GainsByMove:
         Gain of each move, or of each direction (down, up), over the largest one [1].
     differ : bool
         They differ by more than the log's uncertainty.
+    dead_band : float
+        Dead band that would explain it: what every reversal lost of the CO [CO unit]; zero
+        where it would not.
+    cost : float
+        Sum of squares with the gains of their own [PV unit squared].
     data : BumpData
         The same test with the moves scaled to what they achieved.
     """
 
     scale: NDArray[np.float64]
     differ: bool
+    dead_band: float
+    cost: float
     data: BumpData
 
 
@@ -98,7 +107,38 @@ def gains_by_move(problem: Problem, estimate: Estimate) -> GainsByMove:
             between = float(np.sqrt(max(cov[high, high] + cov[low, low] - 2.0 * cov[high, low], 0.0)))
             explained = estimate.cost > _EXPLAINED * float(np.sum((root * residual) ** 2))
             differ = bool(gap > _SURE * between or explained)
-    return GainsByMove(scale=scale, differ=differ, data=_scaled(problem.data, held, scale[group]))
+    lost = 0.0
+    if differ and count == held.at.size and bool(np.all(known)):
+        lost, scale = _as_dead_band(held.size, np.abs(gains), scale)
+    return GainsByMove(
+        scale=scale,
+        differ=differ,
+        dead_band=lost,
+        cost=float(np.sum((root * residual) ** 2)),
+        data=_scaled(problem.data, held, scale[group]),
+    )
+
+
+def _as_dead_band(
+    size: NDArray[np.float64], gains: NDArray[np.float64], scale: NDArray[np.float64]
+) -> tuple[float, NDArray[np.float64]]:
+    """Explain unequal gains by a dead band that every reversal has to cross first, if it can.
+
+    The first move is taken to go where the valve last went. A move of size d achieves
+    g (d - b) after a reversal and g d otherwise; g and b by least squares.
+    """
+    turned = np.concatenate([[False], np.sign(size[1:]) != np.sign(size[:-1])])
+    moved = np.abs(size)
+    columns = np.column_stack([moved, -turned.astype(float)])
+    (gain, product), *_ = np.linalg.lstsq(columns, gains * moved, rcond=None)
+    lost = float(product / gain)
+    if not np.any(turned) or not 0.0 < lost < float(np.min(moved[turned])):
+        return 0.0, scale
+    explained = 1.0 - lost * turned / moved
+    apart = np.abs(gains / gain - explained)
+    if float(np.max(apart)) > _DEAD_BAND_FITS * lost / float(np.min(moved[turned])):
+        return 0.0, scale
+    return lost, explained
 
 
 def _solve(

@@ -229,6 +229,27 @@ def as_screened(problem: Problem, screened: Screened) -> Estimate:
     return _collect(problem, screened.structure, end, [end], hold=end.dead_time < 0.0)
 
 
+def at_point(
+    problem: Problem, structure: Structure, search: NDArray[np.float64], dead_time: float
+) -> Estimate:
+    """Take searched numbers and dead time as they are and solve for the linear part.
+
+    Parameters
+    ----------
+    problem : Problem
+    structure : Structure
+    search : (k,) ndarray
+    dead_time : float
+        [s].
+
+    Returns
+    -------
+    Estimate
+    """
+    end = End(search, dead_time, 0.0, True)
+    return _collect(problem, structure, end, [end], hold=False)
+
+
 def _ranked(problem: Problem, structure: Structure, ends: list[End]) -> tuple[End, ...]:
     if len(ends) == 1:
         return tuple(ends)

@@ -1,4 +1,4 @@
-"""What is left over after a fit: its level, its colour, its outliers, and what they cost.
+"""What is left over after a fit: its level, its colour, and what they cost.
 
 Residuals of a plant log are seldom independent: a slow part (load, weather, mixing) stands
 under a white one (sensor, quantisation). Both are estimated together, a first-order
@@ -22,14 +22,6 @@ if TYPE_CHECKING:
 
     from numpy.typing import NDArray
 
-#: A residual this many robust standard deviations from its neighbours is set aside [1].
-_OUTLIER_SD = 6.0
-#: Rows on each side that say what a residual's neighbours are.
-_OUTLIER_REACH = 4
-#: At most this share of the rows may be called outliers before the fit itself is the suspect [1].
-_OUTLIER_SHARE = 0.05
-#: From the median absolute deviation to the standard deviation of a normal variable.
-_MAD_TO_SD = 1.4826
 #: Correlation times looked at: from this many log intervals to this share of the record.
 _SHORTEST_CORRELATION = 0.3
 _LONGEST_CORRELATION = 0.5
@@ -98,9 +90,7 @@ def colour(
     logged = float(np.sum(weight))
     if residual.size <= jacobian.shape[1] + 2 or not np.any(residual):
         return Noise(sd=0.0, correlation=0.0, slow_share=0.0, effective_samples=logged)
-    root = np.sqrt(weight)
-    size = float(np.linalg.norm(root * residual))
-    columns = np.column_stack([_spanned(root[:, None] * jacobian), root * residual / size])
+    columns, size = _columns(residual, jacobian, weight)
     white, variance = _white_deviance(columns)
     found = _search(columns, t, weight)
     if found is None or white - found[0] < _COLOUR_GAIN:
@@ -114,6 +104,42 @@ def colour(
         slow_share=share,
         effective_samples=logged**2 / (spread + (1.0 - share) * logged),
     )
+
+
+def deviance(
+    residual: NDArray[np.float64],
+    t: NDArray[np.float64],
+    jacobian: NDArray[np.float64],
+    weight: NDArray[np.float64],
+) -> float:
+    """Give -2 log of the restricted likelihood of a residual under its most likely colour, up to a constant.
+
+    Parameters
+    ----------
+    residual : (n,) ndarray
+        PV minus fit [PV unit].
+    t : (n,) ndarray
+        Times of the rows [s].
+    jacobian : (n, p) ndarray
+        Derivatives of the fit by its p parameters.
+    weight : (n,) ndarray
+        Logged rows each row is the mean of [1].
+    """
+    columns, size = _columns(residual, jacobian, weight)
+    found = _search(columns, t, weight)
+    lowest = _white_deviance(columns)[0]
+    if found is not None:
+        lowest = min(lowest, found[0])
+    return float(lowest + 2.0 * (residual.size - columns.shape[1] + 1) * np.log(size))
+
+
+def _columns(
+    residual: NDArray[np.float64], jacobian: NDArray[np.float64], weight: NDArray[np.float64]
+) -> tuple[NDArray[np.float64], float]:
+    """Give a basis of what was fitted and the residual, of unit size, as the last column; and its size."""
+    root = np.sqrt(weight)
+    size = float(np.linalg.norm(root * residual))
+    return np.column_stack([_spanned(root[:, None] * jacobian), root * residual / size]), size
 
 
 def covariance(
@@ -230,32 +256,6 @@ class Whitener:
         flat = sharpened.reshape(-1, rows.shape[-1])
         solved, _ = dtbtrs(self._factor, flat.T, uplo="L")
         return np.asarray(solved.T.reshape(rows.shape))
-
-
-def outliers(residual: NDArray[np.float64], resolution: float) -> NDArray[np.bool_]:
-    """Find rows that stand apart from their neighbours.
-
-    Parameters
-    ----------
-    residual : (n,) ndarray
-        PV minus fit [PV unit].
-    resolution : float
-        Differences below this are never called outliers [PV unit].
-
-    Returns
-    -------
-    (n,) bool ndarray
-        True at the rows to set aside; none where they would be more than a few percent,
-        since then the fit and not the row is the suspect.
-    """
-    padded = np.pad(residual, _OUTLIER_REACH, mode="reflect")
-    windows = np.lib.stride_tricks.sliding_window_view(padded, 2 * _OUTLIER_REACH + 1)
-    apart = np.abs(residual - np.median(windows, axis=1))
-    sd = _MAD_TO_SD * float(np.median(np.abs(residual - np.median(residual))))
-    found = apart > max(_OUTLIER_SD * sd, resolution)
-    if np.count_nonzero(found) > _OUTLIER_SHARE * residual.size:
-        return np.zeros(residual.size, dtype=bool)
-    return np.asarray(found)
 
 
 def _spanned(jacobian: NDArray[np.float64]) -> NDArray[np.float64]:

@@ -12,8 +12,10 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from fitters.between import gains_by_move
-from fitters.estimate import as_screened, screen
-from fitters.noise import outliers
+from fitters.disturbance import load_step
+from fitters.estimate import as_screened, at_point, screen
+from fitters.noise import colour
+from fitters.outliers import outliers
 from fitters.problem import Problem
 from fitters.structures import all_structures, structure_named
 from fitters.thin import thinned
@@ -22,6 +24,7 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from fitters.between import GainsByMove
+    from fitters.disturbance import LoadStep
     from fitters.estimate import Estimate, Screened
     from fitters.fit import BumpData
 
@@ -33,6 +36,12 @@ _SETTLING_GAIN = 25.0
 #: ... in a baseline of at least so many rows that fits this many times worse than the rest [1].
 _BASELINE_ROWS = 5
 _BASELINE_WORSE = 2.0
+#: Structures from which a load step is looked for.
+_PLAIN_STRUCTURES = 2
+#: Rows from the first move to the load step that a second look needs.
+_ROWS_BEFORE_LOAD = 10
+#: With it they must explain more than the closest of all structures, by this in twice the log likelihood.
+_LOAD_GAIN = 30.0
 #: ... and over which the PV goes by at least this share of its whole range [1].
 _BASELINE_MOVED = 0.05
 
@@ -70,8 +79,18 @@ def prepare(data: BumpData) -> Prepared:
     data = thinned(data)
     problem = Problem(data, np.ones(data.t.size, dtype=bool), drift=True, settling=False)
     problem, screened, apart = _prepared(problem)
-    problem, screened, moves = _with_own_gains(problem, screened)
-    return Prepared(problem=problem, screened=tuple(screened), notes=_notes(apart, problem.settling, moves))
+    moves = gains_by_move(problem, as_screened(problem, _simplest(screened)))
+    load = _load_step(problem, screened)
+    if load is not None and moves.differ and moves.cost < load.cost:
+        load = None  # gains of their own explain it better
+    if load is not None and load.leaves_enough:
+        problem = problem.changed(used=problem.used & (problem.data.t < load.clean_until))
+        screened = _screen_all(problem)
+        moves = gains_by_move(problem, as_screened(problem, _simplest(screened)))
+    if moves.differ:
+        problem, screened, moves = _with_own_gains(problem, moves)
+    notes = _notes(apart, problem, moves, load)
+    return Prepared(problem=problem, screened=tuple(screened), notes=notes)
 
 
 def _prepared(problem: Problem) -> tuple[Problem, list[Screened], NDArray[np.bool_]]:
@@ -82,24 +101,50 @@ def _prepared(problem: Problem) -> tuple[Problem, list[Screened], NDArray[np.boo
         problem = problem.changed(settling=True)
         screened = _screen_all(problem)
         closest = as_screened(problem, screened[0])
-    apart = outliers(closest.residual, ARITHMETIC * float(np.ptp(problem.data.pv)))
+    apart = outliers(
+        np.sqrt(problem.data.weight) * closest.residual, ARITHMETIC * float(np.ptp(problem.data.pv))
+    )
     if np.any(apart):
         problem = problem.changed(used=~apart)
         screened = _screen_all(problem)
     return problem, screened, apart
 
 
-def _with_own_gains(
-    problem: Problem, screened: list[Screened]
-) -> tuple[Problem, list[Screened], GainsByMove]:
-    """Scale the moves to what they achieved, where they were not answered alike.
+def _load_step(problem: Problem, screened: list[Screened]) -> LoadStep | None:
+    """Look for a load step from the closest plain structures; a zero would imitate it."""
+    plain = [s for s in screened if s.structure.gains == 1][:_PLAIN_STRUCTURES]
+    found = [_load_step_seen_from(problem, s) for s in plain]
+    best = min((f for f in found if f is not None), key=lambda f: f.cost, default=None)
+    # what another structure explains as well needs no load step
+    lowest = as_screened(problem, screened[0]).cost
+    if best is None or problem.pv.size * np.log(lowest / best.cost) < _LOAD_GAIN:
+        return None
+    return best
+
+
+def _load_step_seen_from(problem: Problem, screened: Screened) -> LoadStep | None:
+    """Look twice: lags that the load has spoilt are had again from the part before it."""
+    whole = as_screened(problem, screened)
+    first = load_step(problem, whole)
+    if first is None:
+        return None
+    clean = problem.used & (problem.data.t < first.clean_until)
+    if np.count_nonzero(clean & (problem.data.t > problem.held.at[0])) < _ROWS_BEFORE_LOAD:
+        return None
+    before = problem.changed(used=clean)
+    part = as_screened(before, screen(before, [screened.structure])[0])
+    noise = colour(part.residual[before.used], before.t, part.jacobian, before.weight)
+    from_part = at_point(problem, screened.structure, part.search, part.dead_time)
+    found = [load_step(problem, estimate, noise) for estimate in (whole, from_part)]
+    return min((f for f in found if f is not None), key=lambda f: f.cost, default=None)
+
+
+def _with_own_gains(problem: Problem, moves: GainsByMove) -> tuple[Problem, list[Screened], GainsByMove]:
+    """Scale the moves to what they achieved, since they were not answered alike.
 
     Lags and dead time that one gain has spoilt spoil the gains too, so this is done twice,
     each time against the moves as logged.
     """
-    moves = gains_by_move(problem, as_screened(problem, _simplest(screened)))
-    if not moves.differ:
-        return problem, screened, moves
     scaled = problem.changed(data=moves.data)
     better = as_screened(scaled, _simplest(_screen_all(scaled)))
     second = gains_by_move(problem, better)
@@ -142,22 +187,41 @@ def _still_settling(problem: Problem, screened: list[Screened], closest: Estimat
     return bool(rows * np.log(max(screened[0].cost, floor) / max(cost, floor)) > _SETTLING_GAIN)
 
 
-def _notes(apart: NDArray[np.bool_], settling: bool, moves: GainsByMove) -> tuple[tuple[str, str], ...]:
+def _notes(
+    apart: NDArray[np.bool_], problem: Problem, moves: GainsByMove, load: LoadStep | None
+) -> tuple[tuple[str, str], ...]:
     notes = []
     count = int(np.count_nonzero(apart))
     if count:
         notes.append(("outliers", f"{count} rows stand apart from their neighbours and were set aside."))
     if moves.differ:
-        shares = ", ".join(f"{100 * share:.0f} %" for share in moves.scale)
+        notes.append(("gain-differs-between-moves", _unlike(moves)))
+    if load is not None:
+        done = (
+            "Only the part before it was fitted."
+            if load.leaves_enough
+            else "Too little of the test lies before it to fit that part alone: repeat the test."
+        )
         notes.append(
             (
-                "gain-differs-between-moves",
-                f"The moves were not answered alike: {shares} of the largest gain, in their order. "
-                "The largest gain is used, which is the safe one; expect slower control elsewhere.",
+                "load-step",
+                f"The PV moved by {load.size:.2g} from {load.at:.4g} s on with no move of the output to "
+                f"explain it. {done}",
             )
         )
-    if settling:
+    if problem.settling:
         notes.append(
             ("still-settling", "The PV was still settling when the record began; that was fitted with it.")
         )
     return tuple(notes)
+
+
+def _unlike(moves: GainsByMove) -> str:
+    shares = ", ".join(f"{100 * share:.0f} %" for share in moves.scale)
+    said = f"The moves were not answered alike: {shares} of the largest gain, in their order. "
+    if moves.dead_band > 0.0:
+        said += (
+            f"A dead band of {moves.dead_band:.2g} of the output, lost at each reversal, would explain it: "
+            "check the valve. "
+        )
+    return said + "The largest gain is used, which is the safe one; expect slower control elsewhere."

@@ -60,5 +60,8 @@ def test_errors_are_as_small_as_the_log_allows(name, noise):
     found, chosen = many(name, list(truth), noise=noise)
     error = found[:, :, 0] - np.array(list(truth.values()))
     ratio = np.sqrt(np.mean(error**2, axis=0)) / bound
-    print(f"\n{name}, noise {100 * noise:.0f} %: chosen {100 * chosen:.1f} %", dict(zip(truth, ratio.round(3), strict=True)))
+    print(
+        f"\n{name}, noise {100 * noise:.0f} %: chosen {100 * chosen:.1f} %",
+        dict(zip(truth, ratio.round(3), strict=True)),
+    )
     assert np.all(ratio <= EFFICIENCY)

@@ -3,7 +3,8 @@
 import numpy as np
 import pytest
 
-from fitters.noise import Noise, Whitener, colour, covariance, outliers, whitened_covariance
+from fitters.noise import Noise, Whitener, colour, covariance, whitened_covariance
+from fitters.outliers import outliers
 
 T = np.arange(400) * 0.5
 ALIKE = np.ones(T.size)
