@@ -13,6 +13,7 @@ from fitters.intervals import covariance_of, to_fit
 from fitters.noise import WHITE, colour
 from fitters.prepare import ARITHMETIC, prepare
 from fitters.problem import Problem
+from fitters.spread import gain_scatter
 from fitters.structures import structure_named
 
 if TYPE_CHECKING:
@@ -88,7 +89,13 @@ def choose(data: BumpData) -> Choice:
         notes.append(("drift", "A straight-line drift was found and taken out."))
     best = replace(best, notes=tuple(notes))
     candidates[0] = replace(candidates[0], fit=best)
-    return Choice(best=best, candidates=tuple(candidates), reason=_reason(candidates), data=problem.data)
+    return Choice(
+        best=best,
+        candidates=tuple(candidates),
+        reason=_reason(candidates),
+        data=problem.data,
+        gain_scatter=gain_scatter(prepared.gains),
+    )
 
 
 def _scored(

@@ -211,9 +211,13 @@ class Choice:
         Why the chosen structure stands before the next, one or two sentences.
     data : BumpData
         The rows the fits rest on, moves scaled to what they achieved.
+    gain_scatter : float or None
+        Relative standard uncertainty of the gain from how the moves disagree, where they were
+        not scaled [1]; None with fewer than three moves.
     """
 
     best: Fit
     candidates: tuple[Candidate, ...]
     reason: str
     data: BumpData
+    gain_scatter: float | None

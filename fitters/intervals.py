@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -9,6 +10,7 @@ from scipy.special import stdtrit
 
 from fitters.fit import Fit, Parameter, frozen
 from fitters.noise import covariance, whitened_covariance
+from fitters.profile import ends_of
 
 if TYPE_CHECKING:
     from collections.abc import Callable
@@ -26,6 +28,10 @@ _COVERAGE = 0.95
 _UNKNOWN_LOG_SD = 3.0
 #: A factor drawn on a logarithmic scale when it is this many standard errors from zero [1].
 _SURE_OF_SIGN = 2.5
+#: A lag whose standard error is more than this share of it has a lopsided interval [1].
+_LOPSIDED = 0.3
+#: With more searched numbers than this the dead time's interval is left to the curvature.
+_PROFILED = 2
 #: Fewest degrees of freedom the noise estimate is credited with [1].
 _FEWEST_DEGREES = 3.0
 
@@ -52,6 +58,7 @@ def to_fit(estimate: Estimate, problem: Problem, noise: Noise, criterion: float)
     degrees = max(noise.effective_samples - cov.shape[0], _FEWEST_DEGREES)
     quantile = float(stdtrit(degrees, 0.5 + 0.5 * _COVERAGE))
     parameters, own = _parameters(estimate, cov, quantile, data.interval)
+    parameters = _lopsided(parameters, estimate, problem, noise, quantile)
     correlation = _correlation(own)
     model = estimate.structure.model(estimate.search, estimate.gains, max(estimate.dead_time, 0.0))
     used_residual = estimate.residual[used]
@@ -162,6 +169,35 @@ def _parameters(
     chosen = all_slopes[own]
     finite = np.where(np.isfinite(cov), cov, 0.0)
     return (*out[1 : point.size], out[0], *out[point.size :]), chosen @ finite @ chosen.T
+
+
+def _lopsided(
+    parameters: tuple[Parameter, ...], estimate: Estimate, problem: Problem, noise: Noise, quantile: float
+) -> tuple[Parameter, ...]:
+    """Replace the intervals that the curvature gets wrong: at zero, and of a lag the log hardly ends."""
+    structure = estimate.structure
+    slow = noise.slow_share > 0.0 and problem.noise.slow_share <= 0.0
+    if not structure.has_dead_time_search or noise.sd <= 0.0 or slow:
+        return parameters
+    found = {p.name: p for p in parameters}
+    dead_time = found["dead_time"]
+    if dead_time.low <= 0.0 and structure.searched <= _PROFILED:
+        ends = ends_of(
+            problem, estimate, noise, held=structure.searched, stderr=dead_time.stderr, quantile=quantile
+        )
+        found["dead_time"] = replace(dead_time, low=max(ends.low, 0.0), high=ends.high)
+    lag, gain = found.get("lag"), parameters[0]
+    if structure.searched == 1 and lag is not None and lag.stderr > _LOPSIDED * lag.value:
+        wide = lag.stderr / lag.value if np.isfinite(lag.stderr) else _UNKNOWN_LOG_SD
+        ends = ends_of(problem, estimate, noise, held=0, stderr=min(wide, 1.0), quantile=quantile)
+        low, high = float(np.exp(ends.low)), float(np.exp(ends.high))
+        found["lag"] = replace(lag, low=low, high=high)
+        if gain.name == "gain":
+            edges = sorted(
+                (ends.gain_low, ends.gain_high if np.isfinite(high) else np.copysign(np.inf, gain.value))
+            )
+            found["gain"] = replace(gain, low=edges[0], high=edges[1])
+    return tuple(found.values())
 
 
 def _values(estimate: Estimate, point: NDArray[np.float64]) -> NDArray[np.float64]:

@@ -55,12 +55,15 @@ class Prepared:
     problem : Problem
     screened : tuple of Screened
         Every structure after a quick look, closest first.
+    gains : tuple of float
+        What each move achieved over the largest [1]; none where the moves were scaled by it.
     notes : tuple of (str, str)
         Code and sentence for what was changed.
     """
 
     problem: Problem
     screened: tuple[Screened, ...]
+    gains: tuple[float, ...]
     notes: tuple[tuple[str, str], ...]
 
 
@@ -90,7 +93,10 @@ def prepare(data: BumpData) -> Prepared:
     if moves.differ:
         problem, screened, moves = _with_own_gains(problem, moves)
     notes = _notes(apart, problem, moves, load)
-    return Prepared(problem=problem, screened=tuple(screened), notes=notes)
+    # more moves than were looked at one by one are known by direction only
+    alone = not moves.differ and moves.scale.size == problem.held.at.size
+    gains = tuple(moves.scale.tolist()) if alone else ()
+    return Prepared(problem=problem, screened=tuple(screened), gains=gains, notes=notes)
 
 
 def _prepared(problem: Problem) -> tuple[Problem, list[Screened], NDArray[np.bool_]]:

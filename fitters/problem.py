@@ -55,6 +55,8 @@ class Problem:
         spreads of the PV, at the used rows.
     held, held_all : HeldInput
         The CO seen at the used rows, and at all of them.
+    spread : float
+        Standard deviation of the PV [PV unit].
     levels, levels_all : (m, 1 or 2), (n, 1 or 2) ndarray
         Columns of offset and, if fitted, drift.
     longest_dead_time : float
@@ -85,8 +87,8 @@ class Problem:
         self._whitener = Whitener(self.t, noise, self.weight)
         self._level_basis = np.linalg.qr(self.whiten(self.levels.T).T)[0]
         self.level = float(np.mean(data.pv[used]))
-        spread = float(np.std(data.pv[used]))
-        self.pv = self.without_level((data.pv[used] - self.level) / (spread if spread > 0 else 1.0))
+        self.spread = float(np.std(data.pv[used])) or 1.0
+        self.pv = self.without_level((data.pv[used] - self.level) / self.spread)
         moved_at = float(self.held.at[0]) if self.held.at.size else float(data.t[0])
         self.longest_dead_time = max(float(data.t[-1]) - moved_at - 4.0 * data.interval, data.interval)
 

@@ -60,6 +60,26 @@ class ProcessModel:
         object.__setattr__(self, "denominator", tuple(float(c) for c in den))
         object.__setattr__(self, "dead_time", float(self.dead_time))
 
+    def scaled(self, gain: float, lags: float, dead_time: float) -> ProcessModel:
+        """Give the process with its gain, lags and zeros, and dead time multiplied.
+
+        Parameters
+        ----------
+        gain, lags, dead_time : float
+            Positive factors [1].
+        """
+        den = np.asarray(self.denominator)
+        inner = den[: den.size - self.integrators]
+        num = np.asarray(self.numerator)
+        return ProcessModel(
+            numerator=tuple(gain * num * lags ** np.arange(num.size - 1.0, -1.0, -1.0)),
+            denominator=(
+                *(inner * lags ** np.arange(inner.size - 1.0, -1.0, -1.0)),
+                *([0.0] * self.integrators),
+            ),
+            dead_time=dead_time * self.dead_time,
+        )
+
     @cached_property
     def integrators(self) -> int:
         """Number of poles at zero."""

@@ -62,7 +62,13 @@ class End:
     converged: bool
 
 
-def approach(problem: Problem, structure: Structure, start: Start, hopeless: float = np.inf) -> End:
+def approach(
+    problem: Problem,
+    structure: Structure,
+    start: Start,
+    hopeless: float = np.inf,
+    held: int | None = None,
+) -> End:
     """Take a few damped Gauss-Newton steps (Levenberg 1944, Marquardt 1963): enough to rank a structure.
 
     Parameters
@@ -74,6 +80,8 @@ def approach(problem: Problem, structure: Structure, start: Start, hopeless: flo
     hopeless : float
         The steps end early where even the straight-line forecast of the cost stays above this,
         in squared spreads of the PV [1].
+    held : int or None
+        Place of a number that stays as it is: a searched one, or one past them for the dead time.
 
     Returns
     -------
@@ -86,6 +94,9 @@ def approach(problem: Problem, structure: Structure, start: Start, hopeless: flo
     for _ in range(_APPROACH_STEPS):
         curvature = slopes @ slopes.T
         gradient = slopes @ residual
+        if held is not None:
+            curvature[held, :] = curvature[:, held] = gradient[held] = 0.0
+            curvature[held, held] = 1.0
         curvature.flat[:: point.size + 1] *= 1.0 + damping
         curvature.flat[:: point.size + 1] += _TINY
         step = -np.linalg.solve(curvature, gradient)

@@ -20,7 +20,7 @@ if TYPE_CHECKING:
     from collections.abc import Sequence
     from pathlib import Path
 
-    from fitters.fit import BumpData, Choice
+    from fitters.fit import Choice
     from pipeline.findings import Caution
     from pipeline.intake.log import Log
     from pipeline.loop.types import Kind
@@ -120,19 +120,22 @@ def commission(path: Path, *, request: Request) -> Record:
         overshoot_pct=request.overshoot,
     )
     seen = inspect(path, request=request)
-    data: BumpData | None = None
     choice: Choice | None = None
     recommended: Recommended | None = None
     if seen.quality.verdict != "do not use":
-        data = bump_data(seen.log, seen.bumps)
-        choice = choose(data)
-        if not _stopped(cautions(_facts(seen, sheet, asked, choice, None))):
-            recommended = recommend(choice.best, asked, log_interval=seen.log.interval)
-    return _record(seen, sheet, asked, data, choice, recommended)
+        choice = choose(bump_data(seen.log, seen.bumps))
+        if not _stopped(cautions(_facts(seen, sheet, asked, choice, None, {}))):
+            recommended = recommend(choice, asked, log_interval=seen.log.interval)
+    return _record(seen, sheet, asked, choice, recommended)
 
 
 def _facts(
-    seen: Inspection, sheet: LoopSheet, asked: Wanted, choice: Choice | None, made: Recommended | None
+    seen: Inspection,
+    sheet: LoopSheet,
+    asked: Wanted,
+    choice: Choice | None,
+    made: Recommended | None,
+    gains: dict[str, float],
 ) -> Facts:
     return Facts(
         log=seen.log,
@@ -143,6 +146,7 @@ def _facts(
         tuning=None if made is None else made.tuning,
         backed_off=None if made is None else made.backed_off,
         dead_time_floor=0.0 if made is None else made.dead_time_floor,
+        structure_gains=gains,
     )
 
 
@@ -154,25 +158,26 @@ def _record(
     seen: Inspection,
     sheet: LoopSheet,
     asked: Wanted,
-    data: BumpData | None,
     choice: Choice | None,
     made: Recommended | None,
 ) -> Record:
     """Write down what was found; settings only where nothing stops them."""
-    told = cautions(_facts(seen, sheet, asked, choice, made))
+    gains = {} if choice is None else _structure_gains(choice, asked, made)
+    told = cautions(_facts(seen, sheet, asked, choice, made, gains))
     pv_unit = sheet.pv.unit or seen.log.pv_column.unit
     co_unit = sheet.co.unit or seen.log.co_column.unit
     settings = None
     if choice is not None and made is not None and not _stopped(told):
         found = as_found(choice.best, sheet, asked, made.dead_time_floor)
-        settings = build.settings(made.tuning, made.backed_off, asked.entry, found, pv_unit, co_unit)
+        settings = build.settings(
+            made.tuning, made.backed_off, made.source, asked.entry, found, pv_unit, co_unit
+        )
         steps = advice.after_settings(made.backed_off, seen.bumps, sheet, pv_unit or "PV units", choice.best)
     else:
         fit = None if choice is None else choice.best
         steps = advice.after_withholding(seen.log, seen.bumps, fit, co_unit or "CO units")
     identified = None
     if choice is not None:
-        gains = _rival_gains(choice, asked, made)
         identified = build.identified(choice, gains, pv_unit or "PV", co_unit or "CO")
     return build.assemble(
         made=Made(
@@ -185,13 +190,13 @@ def _record(
         criteria=asked.criteria,
         cautions=told,
         next_steps=steps,
-        shown=curves.series(seen.log, data, None if choice is None else choice.best, pv_unit, co_unit),
+        shown=curves.series(seen.log, choice, pv_unit, co_unit),
         identified=identified,
         settings=settings,
     )
 
 
-def _rival_gains(choice: Choice, asked: Wanted, made: Recommended | None) -> dict[str, float]:
+def _structure_gains(choice: Choice, asked: Wanted, made: Recommended | None) -> dict[str, float]:
     """Give the controller gain that each believable structure would lead to, before any back-off."""
     if made is None:
         return {}

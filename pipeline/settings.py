@@ -186,6 +186,14 @@ class CriteriaTable(_Table):
         return self
 
 
+class UncertaintyTable(_Table):
+    """[uncertainty]: the least scatter of the process to allow for, whatever the log says [%]."""
+
+    gain_pct: Annotated[float, Field(ge=0, le=100)] | None = None
+    lags_pct: Annotated[float, Field(ge=0, le=100)] | None = None
+    dead_time_pct: Annotated[float, Field(ge=0, le=100)] | None = None
+
+
 class LimitsTable(_Table):
     """[limits]: what lies near the working point."""
 
@@ -232,7 +240,7 @@ class LoopSheet(_Table):
 
     Attributes
     ----------
-    loop, columns, time, pv, co, controller, as_found, criteria, limits, people, references
+    loop, columns, time, pv, co, controller, as_found, criteria, uncertainty, limits, people, references
         One frozen table each; a key that was not given is None.
     """
 
@@ -244,6 +252,7 @@ class LoopSheet(_Table):
     controller: ControllerTable = ControllerTable()
     as_found: AsFoundTable = AsFoundTable()
     criteria: CriteriaTable = CriteriaTable()
+    uncertainty: UncertaintyTable = UncertaintyTable()
     limits: LimitsTable = LimitsTable()
     people: PeopleTable = PeopleTable()
     references: ReferencesTable = ReferencesTable()

@@ -8,14 +8,14 @@ from __future__ import annotations
 
 from collections.abc import Callable
 
-from pipeline.cautions import general, process, settings
+from pipeline.cautions import general, process, settings, structure
 from pipeline.cautions.facts import Facts
 from pipeline.findings import Caution, worst_first
 
 __all__ = ["RULES", "Facts", "cautions"]
 
 #: What the fit itself noticed and that restricts the use of the settings.
-_RESTRICTING = frozenset({"gain-differs-between-moves", "dead-time-ambiguous"})
+_RESTRICTING = frozenset({"gain-differs-between-moves", "dead-time-ambiguous", "load-step"})
 #: The order is the order of reading within one level.
 RULES: tuple[Callable[[Facts], Caution | None], ...] = (
     process.sign_unknown,
@@ -34,7 +34,10 @@ RULES: tuple[Callable[[Facts], Caution | None], ...] = (
     settings.noisy_output,
     process.dead_time_floored,
     process.coarse_clock,
-    process.lag_or_integrator,
+    structure.not_settled,
+    structure.lag_or_integrator,
+    structure.rival_changes_gain,
+    structure.moves_scatter,
     general.motion,
     general.units_matter,
     general.permit,

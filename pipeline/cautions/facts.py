@@ -30,6 +30,8 @@ class Facts:
     backed_off : BackedOff or None
     dead_time_floor : float
         Dead time assumed at least [s].
+    structure_gains : dict of str to float
+        Controller gain that each believable structure leads to before any back-off.
     """
 
     log: Log
@@ -40,6 +42,7 @@ class Facts:
     tuning: Tuning | None
     backed_off: BackedOff | None
     dead_time_floor: float
+    structure_gains: dict[str, float]
 
 
 def process_gain(fit: Fit) -> Parameter:

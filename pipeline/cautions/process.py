@@ -179,30 +179,12 @@ def coarse_clock(facts: Facts) -> Caution | None:
     )
 
 
-def lag_or_integrator(facts: Facts) -> Caution | None:
-    """Say that the PV had not levelled out."""
-    if facts.choice is None:
-        return None
-    fit = facts.choice.best
-    lags = [p for p in fit.parameters if p.name in ("lag", "longer_lag")]
-    if fit.model.integrators or not lags or lags[0].value < facts.log.span:
-        return None
-    return Caution(
-        code="not-settled",
-        level="care",
-        text="The PV had not levelled out: its first slope is known, its final gain is not. "
-        "Tight control can rest on this test; slow control cannot.",
-        value=lags[0].value,
-        limit=facts.log.span,
-    )
-
-
 def noise_is_slow(facts: Facts) -> Caution | None:
     """Say how few rows carry news."""
     if facts.choice is None:
         return None
     fit = facts.choice.best
-    rows = float(np.count_nonzero(fit.used))
+    rows = float(np.sum(facts.choice.data.weight[fit.used]))
     if fit.effective_samples > 0.5 * rows:
         return None
     return Caution(

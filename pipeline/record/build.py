@@ -96,6 +96,7 @@ def identified(choice: Choice, gains: Mapping[str, float], pv_unit: str, co_unit
 def settings(
     tuning: Tuning,
     backed_off: BackedOff,
+    source: str,
     entry: forms.Entry,
     found: tuple[forms.Entered, Margins, float | None] | None,
     pv_unit: str | None,
@@ -107,6 +108,8 @@ def settings(
     ----------
     tuning : Tuning
     backed_off : BackedOff
+    source : str
+        Source of doubt that ruled the back-off.
     entry : Entry
         How the controller takes its settings.
     found : tuple of (Entered, Margins, float or None) or None
@@ -130,7 +133,7 @@ def settings(
         controller=parts.controller_info(backed_off.controller, entry, pv_unit, co_unit),
         backed_off=backed_off,
         binding=tuning.binding,
-        source="fit covariance",
+        source=source,
         as_found=as_found,
     )
 

@@ -12,7 +12,7 @@ from pipeline.record.schema import LoadResponse, PredictionInfo, Series, Setpoin
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
-    from fitters.fit import BumpData, Fit
+    from fitters.fit import BumpData, Choice
     from pipeline.intake.log import Log
     from pipeline.loop.types import Prediction, Trajectory
     from pipeline.tuning.types import Bands
@@ -47,23 +47,20 @@ def prediction_info(prediction: Prediction, bands: Bands | None) -> PredictionIn
     )
 
 
-def series(
-    log: Log, data: BumpData | None, fit: Fit | None, pv_unit: str | None, co_unit: str | None
-) -> Series:
+def series(log: Log, choice: Choice | None, pv_unit: str | None, co_unit: str | None) -> Series:
     """Give the log as the figures show it, with the fit where it reaches.
 
     Parameters
     ----------
     log : Log
-    data : BumpData or None
-        Rows the fit used.
-    fit : Fit or None
+    choice : Choice or None
+        The fit and the rows it rests on.
     pv_unit, co_unit : str or None
     """
     rows = np.asarray(thinned_rows(log.co.tolist(), log.pv.tolist(), limit=SERIES_ROWS))
     fitted = residual = None
-    if data is not None and fit is not None:
-        fitted = _at_rows(log.t[rows], data.t, fit.fitted)
+    if choice is not None:
+        fitted = _at_rows(log.t[rows], choice.data, choice.best.fitted)
         residual = log.pv[rows] - fitted
     return Series.model_validate(
         {
@@ -88,10 +85,14 @@ def _thin_trajectory(
     return trajectory.t[rows], trajectory.pv[rows], trajectory.co[rows]
 
 
-def _at_rows(
-    wanted: NDArray[np.float64], t: NDArray[np.float64], values: NDArray[np.float64]
-) -> NDArray[np.float64]:
-    """Take the fit at the shown rows; NaN where no fitted row is that one."""
+def _at_rows(wanted: NDArray[np.float64], data: BumpData, values: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Take the fit at the shown rows; NaN where no fitted row is that one.
+
+    Between rows that are means of many it is read off: they lie close against what the fit does.
+    """
+    t = data.t
+    if np.any(data.weight > 1.0):
+        return np.interp(wanted, t, values, left=np.nan, right=np.nan)
     place = np.clip(np.searchsorted(t, wanted), 0, t.size - 1)
     same = np.isclose(t[place], wanted, rtol=0.0, atol=1e-9 * max(float(t[-1]), 1.0))
     return np.where(same, values[place], np.nan)

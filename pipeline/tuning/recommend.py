@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
+from fitters.spread import Floor, plausible
 from pipeline.loop.agreement import check_agreement
 from pipeline.loop.forms import Entered, Entry, action_for, understand
 from pipeline.loop.margins import margins
@@ -12,10 +13,10 @@ from pipeline.loop.simulate import overshoot
 from pipeline.loop.types import Controller
 from pipeline.tuning.tuner import tune
 from pipeline.tuning.types import Criteria
-from pipeline.tuning.uncertainty import back_off
+from pipeline.tuning.uncertainty import back_off, held_phase_margin
 
 if TYPE_CHECKING:
-    from fitters.fit import Fit
+    from fitters.fit import Choice, Fit
     from fitters.process import ProcessModel
     from pipeline.loop.types import Kind, Margins
     from pipeline.settings import LoopSheet
@@ -45,6 +46,8 @@ class Wanted:
         [s].
     derivative_filter_ratio : float
         Derivative time over its filter [1].
+    floor : Floor
+        Least scatter of the process to allow for.
     """
 
     kind: Kind | None
@@ -56,6 +59,7 @@ class Wanted:
     scan: float
     compute_delay: float
     derivative_filter_ratio: float
+    floor: Floor
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -69,11 +73,14 @@ class Recommended:
     backed_off : BackedOff
     dead_time_floor : float
         Dead time assumed at least [s].
+    source : str
+        What the plausible processes were drawn from: the widest source of doubt.
     """
 
     tuning: Tuning
     backed_off: BackedOff
     dead_time_floor: float
+    source: str
 
 
 def wanted(
@@ -121,6 +128,11 @@ def wanted(
         scan=_number(c.scan_s, 0.0),
         compute_delay=_number(c.compute_delay_s, 0.0),
         derivative_filter_ratio=_number(c.derivative_filter_ratio, 10.0),
+        floor=Floor(
+            gain=_number(sheet.uncertainty.gain_pct, 0.0) / 100.0,
+            lags=_number(sheet.uncertainty.lags_pct, 0.0) / 100.0,
+            dead_time=_number(sheet.uncertainty.dead_time_pct, 0.0) / 100.0,
+        ),
     )
 
 
@@ -146,12 +158,12 @@ def entry_of(sheet: LoopSheet) -> Entry:
     )
 
 
-def recommend(fit: Fit, asked: Wanted, *, log_interval: float) -> Recommended:
+def recommend(choice: Choice, asked: Wanted, *, log_interval: float) -> Recommended:
     """Tune on the fitted model, then back off for what the log leaves open.
 
     Parameters
     ----------
-    fit : Fit
+    choice : Choice
     asked : Wanted
     log_interval : float
         Spacing of the log's rows [s].
@@ -159,6 +171,7 @@ def recommend(fit: Fit, asked: Wanted, *, log_interval: float) -> Recommended:
     Returns
     -------
     Recommended
+        Backed off for the source of doubt that leaves the least phase margin.
 
     Raises
     ------
@@ -166,11 +179,17 @@ def recommend(fit: Fit, asked: Wanted, *, log_interval: float) -> Recommended:
         If frequency and time domain give different answers for the final loop.
     """
     floor = _UNSEEN_SHARE * log_interval
-    tuning = tune_model(fit.model, asked, dead_time_floor=floor)
-    models = [_floored(model, floor) for model in fit.draw(PLAUSIBLE, _SEED)]
-    backed_off = back_off(tuning, models, asked.criteria)
+    tuning = tune_model(choice.best.model, asked, dead_time_floor=floor)
+    sources = {
+        name: [_floored(model, floor) for model in models]
+        for name, models in plausible(choice, asked.floor, PLAUSIBLE, _SEED).items()
+    }
+    percentile = asked.criteria.percentile
+    worst = {n: held_phase_margin(m, tuning.controller, percentile) for n, m in sources.items()}
+    source = min(worst, key=lambda name: worst[name])
+    backed_off = back_off(tuning, sources[source], asked.criteria)
     check_agreement(tuning.model, backed_off.controller, backed_off.margins, backed_off.prediction)
-    return Recommended(tuning=tuning, backed_off=backed_off, dead_time_floor=floor)
+    return Recommended(tuning=tuning, backed_off=backed_off, dead_time_floor=floor, source=source)
 
 
 def tune_model(model: ProcessModel, asked: Wanted, *, dead_time_floor: float) -> Tuning:

@@ -102,6 +102,20 @@ def _three(x: Reals) -> tuple[float, float, float]:
     return a, b, c
 
 
+def held_phase_margin(models: Sequence[ProcessModel], controller: Controller, percentile: float) -> float:
+    """Give the phase margin at a percentile of the models [degrees].
+
+    Parameters
+    ----------
+    models : sequence of ProcessModel
+    controller : Controller
+    percentile : float
+        [%].
+    """
+    table = margin_table(stack_loops(models, [controller]), sensitivity=False)
+    return float(np.percentile(table.phase_margin, percentile, method="inverted_cdf"))
+
+
 @dataclass(frozen=True, kw_only=True)
 class _Slower:
     """The settings made slower by a factor, over all plausible models.
@@ -119,14 +133,12 @@ class _Slower:
         longer = c.integral_time / factor if self.stretched else c.integral_time
         return replace(c, gain=c.gain * factor, integral_time=longer)
 
-    def table(self, factor: float, *, sensitivity: bool = True) -> MarginTable:
-        loops = stack_loops(self.models, [self.settings(factor)])
-        return margin_table(loops, sensitivity=sensitivity)
+    def table(self, factor: float) -> MarginTable:
+        return margin_table(stack_loops(self.models, [self.settings(factor)]))
 
     def held(self, factor: float, percentile: float) -> float:
         """Give the phase margin at a percentile of the models."""
-        table = self.table(factor, sensitivity=False)
-        return float(np.percentile(table.phase_margin, percentile, method="inverted_cdf"))
+        return held_phase_margin(self.models, self.settings(factor), percentile)
 
 
 def back_off(tuning: Tuning, models: Sequence[ProcessModel], criteria: Criteria) -> BackedOff:

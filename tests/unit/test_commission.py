@@ -149,7 +149,7 @@ def test_what_the_back_off_has_to_say_reaches_the_reader():
         LoopSheet(), kind="PI", phase_margin=None, gain_margin=None, max_sensitivity=None, overshoot_pct=None
     )
     choice = choose(bump_data(seen.log, seen.bumps))
-    made = recommend(choice.best, asked, log_interval=seen.log.interval)
+    made = recommend(choice, asked, log_interval=seen.log.interval)
     facts = Facts(
         log=seen.log,
         sheet=LoopSheet(),
@@ -159,5 +159,6 @@ def test_what_the_back_off_has_to_say_reaches_the_reader():
         tuning=made.tuning,
         backed_off=replace(made.backed_off, remarks=(said,)),
         dead_time_floor=made.dead_time_floor,
+        structure_gains={},
     )
     assert said in cautions(facts)
