@@ -29,7 +29,7 @@ _UNKNOWN_LOG_SD = 3.0
 #: A factor drawn on a logarithmic scale when it is this many standard errors from zero [1].
 _SURE_OF_SIGN = 2.5
 #: A lag whose standard error is more than this share of it has a lopsided interval [1].
-_LOPSIDED = 0.3
+_LOPSIDED = 0.15
 #: With more searched numbers than this the dead time's interval is left to the curvature.
 _PROFILED = 2
 #: Fewest degrees of freedom the noise estimate is credited with [1].

@@ -83,7 +83,8 @@ def plausible(choice: Choice, floor: Floor, count: int, seed: int) -> dict[str, 
     rng = np.random.default_rng(seed + 1)
     if choice.gain_scatter is not None:
         out["scatter between moves"] = _spread(drawn, rng, Floor(gain=_missing(best, choice.gain_scatter)))
-    believed = [c for c in choice.candidates if c.weight >= _BELIEVED]
+    believed = [choice.candidates[0]]
+    believed += [c for c in choice.candidates[1:] if c.weight >= _BELIEVED and _determined(c.fit)]
     if len(believed) > 1:
         total = sum(c.weight for c in believed)
         mixed: list[ProcessModel] = []
@@ -95,6 +96,12 @@ def plausible(choice: Choice, floor: Floor, count: int, seed: int) -> dict[str, 
         centre = (best.model,) * count
         out["stated floor"] = _spread(centre, rng, floor)
     return out
+
+
+def _determined(fit: Fit) -> bool:
+    """Tell whether the log determines what the structure adds: else it is a simpler one in disguise."""
+    own = [p for p in fit.parameters if p.name != "dead_time"]
+    return all(p.stderr < abs(p.value) for p in own)
 
 
 def _missing(fit: Fit, scatter: float) -> float:

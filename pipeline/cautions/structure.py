@@ -25,14 +25,14 @@ def not_settled(facts: Facts) -> Caution | None:
         return None
     fit = facts.choice.best
     lags = [p for p in fit.parameters if p.name in ("lag", "longer_lag")]
-    if fit.model.integrators or not lags or lags[0].value < facts.log.span:
+    if fit.model.integrators or not lags or lags[0].high < facts.log.span:
         return None
     return Caution(
         code="not-settled",
         level="care",
         text="The PV had not levelled out: its first slope is known, its final gain is not. "
         "Tight control can rest on this test; slow control cannot.",
-        value=lags[0].value,
+        value=lags[0].high,
         limit=facts.log.span,
     )
 
