@@ -79,9 +79,7 @@ def choose(data: BumpData) -> Choice:
     for (score, estimate), weight in zip(scored, weights, strict=True):
         counts = weight >= _WEIGHT_THAT_COUNTS
         kept = drift_kept or estimate.structure.integrators > 0 or not counts
-        fit = _finished(
-            problem if kept else driftless, estimate, noise, float(score), own_colour=bool(counts)
-        )
+        fit = _finished(problem if kept else driftless, estimate, noise, float(score), counts=bool(counts))
         candidates.append(Candidate(fit=fit, score=float(score - scores[0]), weight=float(weight)))
     best = candidates[0].fit
     notes = [*best.notes, *prepared.notes]
@@ -138,18 +136,18 @@ def _settle_contenders(problem: Problem, screened: Sequence[Screened]) -> list[E
     return out
 
 
-def _finished(problem: Problem, estimate: Estimate, noise: Noise, score: float, *, own_colour: bool) -> Fit:
-    """Give an estimate its intervals, under the colour of what it leaves over itself if asked."""
+def _finished(problem: Problem, estimate: Estimate, noise: Noise, score: float, *, counts: bool) -> Fit:
+    """Give an estimate its intervals, under the colour of what it leaves over itself if it counts."""
     if estimate.drift != 0.0 and not problem.drift:
         estimate = resettle(problem, estimate)
-    if own_colour:
+    if counts:
         used = problem.used
         noise = colour(estimate.residual[used], problem.t, estimate.jacobian, problem.weight)
         weighed = noise if _may_be_noise(noise, problem) else WHITE
         if weighed.slow_share > 0.0 or problem.noise.slow_share > 0.0:
             problem = problem.changed(noise=weighed)
             estimate = resettle(problem, estimate)
-    return to_fit(estimate, problem, noise, score)
+    return to_fit(estimate, problem, noise, score, closely=counts)
 
 
 def _criterion(estimate: Estimate, problem: Problem) -> float:
@@ -226,4 +224,4 @@ def fit_named(data: BumpData, name: str) -> Fit:
     """
     problem = Problem(data, np.ones(data.t.size, dtype=bool), drift=True, settling=False)
     estimate = settle(problem, screen(problem, [structure_named(name)])[0])
-    return _finished(problem, estimate, WHITE, _criterion(estimate, problem), own_colour=True)
+    return _finished(problem, estimate, WHITE, _criterion(estimate, problem), counts=True)

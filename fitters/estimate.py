@@ -28,6 +28,8 @@ if TYPE_CHECKING:
 _SIMPLE = 2
 #: Two refined costs this close, relatively, are the same answer [1].
 _SAME_COST = 1e-3
+#: Relative gain of a step at which an estimate that moved a little has settled again [1].
+_RESETTLED = 1e-7
 #: A minimum this close to the deepest one is a rival to be named [1].
 _RIVAL_COST = 0.02
 #: A structure whose cost is forecast above this many times the lowest is left there [1].
@@ -191,7 +193,10 @@ def resettle(problem: Problem, estimate: Estimate) -> Estimate:
     """
     structure = estimate.structure
     if structure.has_dead_time_search:
-        end = refine(problem, structure, (estimate.search, estimate.dead_time))
+        start = (estimate.search, estimate.dead_time)
+        end = approach(problem, structure, start, tolerance=_RESETTLED)
+        if not end.converged:
+            end = refine(problem, structure, (end.search, end.dead_time))
         again = _not_before_the_move(problem, structure, [end])
     else:
         end = End(estimate.search, estimate.dead_time, 0.0, True)
@@ -225,7 +230,7 @@ def as_screened(problem: Problem, screened: Screened) -> Estimate:
     -------
     Estimate
     """
-    end = screened.tried[0]
+    end = replace(screened.tried[0], converged=True)
     return _collect(problem, screened.structure, end, [end], hold=end.dead_time < 0.0)
 
 

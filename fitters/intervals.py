@@ -36,7 +36,7 @@ _PROFILED = 2
 _FEWEST_DEGREES = 3.0
 
 
-def to_fit(estimate: Estimate, problem: Problem, noise: Noise, criterion: float) -> Fit:
+def to_fit(estimate: Estimate, problem: Problem, noise: Noise, criterion: float, *, closely: bool) -> Fit:
     """Give an estimate its intervals.
 
     Parameters
@@ -48,6 +48,8 @@ def to_fit(estimate: Estimate, problem: Problem, noise: Noise, criterion: float)
         Level and colour of what the fit leaves over.
     criterion : float
         Information criterion, smaller is better [1].
+    closely : bool
+        Ask the likelihood itself where the curvature is a poor guide.
 
     Returns
     -------
@@ -58,7 +60,8 @@ def to_fit(estimate: Estimate, problem: Problem, noise: Noise, criterion: float)
     degrees = max(noise.effective_samples - cov.shape[0], _FEWEST_DEGREES)
     quantile = float(stdtrit(degrees, 0.5 + 0.5 * _COVERAGE))
     parameters, own = _parameters(estimate, cov, quantile, data.interval)
-    parameters = _lopsided(parameters, estimate, problem, noise, quantile)
+    if closely:
+        parameters = _lopsided(parameters, estimate, problem, noise, quantile)
     correlation = _correlation(own)
     model = estimate.structure.model(estimate.search, estimate.gains, max(estimate.dead_time, 0.0))
     used_residual = estimate.residual[used]

@@ -40,6 +40,9 @@ _BASELINE_WORSE = 2.0
 _PLAIN_STRUCTURES = 2
 #: Rows from the first move to the load step that a second look needs.
 _ROWS_BEFORE_LOAD = 10
+#: Stretches of the record whose means show slow leftovers, and how far they may scatter against white noise [1].
+_STRETCHES = 20
+_WHITE_RATIO = 1.8
 #: With it they must explain more than the closest of all structures, by this in twice the log likelihood.
 _LOAD_GAIN = 30.0
 #: ... and over which the PV goes by at least this share of its whole range [1].
@@ -118,6 +121,9 @@ def _prepared(problem: Problem) -> tuple[Problem, list[Screened], NDArray[np.boo
 
 def _load_step(problem: Problem, screened: list[Screened]) -> LoadStep | None:
     """Look for a load step from the closest plain structures; a zero would imitate it."""
+    plainest = as_screened(problem, next(s for s in screened if s.structure.gains == 1))
+    if _looks_white(plainest.residual[problem.used]):
+        return None
     plain = [s for s in screened if s.structure.gains == 1][:_PLAIN_STRUCTURES]
     found = [_load_step_seen_from(problem, s) for s in plain]
     best = min((f for f in found if f is not None), key=lambda f: f.cost, default=None)
@@ -126,6 +132,15 @@ def _load_step(problem: Problem, screened: list[Screened]) -> LoadStep | None:
     if best is None or problem.pv.size * np.log(lowest / best.cost) < _LOAD_GAIN:
         return None
     return best
+
+
+def _looks_white(residual: NDArray[np.float64]) -> bool:
+    """Tell whether means over stretches scatter as those of independent rows: a quick look."""
+    length = residual.size // _STRETCHES
+    if length < 2:
+        return False
+    means = residual[: length * _STRETCHES].reshape(_STRETCHES, length).mean(axis=1)
+    return bool(length * np.mean(means**2) < _WHITE_RATIO * np.mean(residual**2))
 
 
 def _load_step_seen_from(problem: Problem, screened: Screened) -> LoadStep | None:

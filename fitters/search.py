@@ -68,6 +68,7 @@ def approach(
     start: Start,
     hopeless: float = np.inf,
     held: int | None = None,
+    tolerance: float = _APPROACH_TOLERANCE,
 ) -> End:
     """Take a few damped Gauss-Newton steps (Levenberg 1944, Marquardt 1963): enough to rank a structure.
 
@@ -82,6 +83,8 @@ def approach(
         in squared spreads of the PV [1].
     held : int or None
         Place of a number that stays as it is: a searched one, or one past them for the dead time.
+    tolerance : float
+        Relative gain of a step at which it is content [1].
 
     Returns
     -------
@@ -90,7 +93,7 @@ def approach(
     point = np.append(start[0], start[1])
     residual, slopes = problem.project(structure, point[:-1], float(point[-1]))
     cost = float(residual @ residual)
-    damping, accepted = _FIRST_DAMPING, 0
+    damping, accepted, settled = _FIRST_DAMPING, 0, False
     for _ in range(_APPROACH_STEPS):
         curvature = slopes @ slopes.T
         gradient = slopes @ residual
@@ -109,13 +112,13 @@ def approach(
         if not new_cost < cost:
             damping *= _HARDER
             continue
-        settled = new_cost > cost * (1.0 - _APPROACH_TOLERANCE)
+        settled = new_cost > cost * (1.0 - tolerance)
         point, residual, slopes, cost = trial, new_residual, new_slopes, new_cost
         accepted += 1
         damping /= _EASIER
         if settled:
             break
-    return End(limited(point[:-1]), float(point[-1]), cost, True)
+    return End(limited(point[:-1]), float(point[-1]), cost, settled)
 
 
 def refine(problem: Problem, structure: Structure, start: Start, *, hold: bool = False) -> End:

@@ -16,7 +16,9 @@ def held(**log):
     truth = np.array(list(TRUTH.values()))
     inside = (found[:, :, 1] <= truth) & (truth <= found[:, :, 2])
     share = 100.0 * inside.mean(axis=0)
-    print(f"\n{log}: chosen {100 * chosen:.1f} %", dict(zip(TRUTH, share.round(1), strict=True)))
+    print(
+        f"\n{log}: chosen {100 * chosen:.1f} %, held {dict(zip(TRUTH, share.round(1).tolist(), strict=True))}"
+    )
     return share
 
 
