@@ -69,17 +69,19 @@ def test_a_test_of_half_a_lag_knows_the_slope_within_three_percent():
 
 
 def test_a_test_too_short_to_tell_keeps_lag_and_integrator_side_by_side():
-    """Row 39: mostly both explain the log alike; a final gain is known to a factor of two at best."""
-    alike = 0
+    """Row 39: mostly both explain the log alike; the slope is known, a final gain seldom and then widely."""
+    alike, missed = 0, 0
     for seed in range(8):
         choice = choose(short_test(seed, noise=0.1, lags=0.2))
         near = [c.fit for c in choice.candidates if c.score < 6.0]
         settling = [f for f in near if f.model.integrators == 0]
         alike += len(settling) > 0 and any(f.model.integrators for f in near)
         if choice.best.structure == "first order":
-            gain = choice.best.parameter("gain")
-            assert gain.high > 2.0 * gain.low and truth_inside(gain, 1.0)
-    assert alike >= 4
+            missed += not truth_inside(choice.best.parameter("gain"), 1.0)
+        else:
+            assert choice.best.structure == "integrator"
+            assert choice.best.parameters[0].value == pytest.approx(0.01, rel=0.25)
+    assert alike >= 4 and missed <= 1
 
 
 def test_a_level_that_does_not_come_back_is_an_integrator():
