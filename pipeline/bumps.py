@@ -135,7 +135,9 @@ def find_bumps(log: Log) -> tuple[Bump, ...]:
     )
 
 
-def bump_data(log: Log, bumps: Sequence[Bump]) -> BumpData:
+def bump_data(
+    log: Log, bumps: Sequence[Bump], *, co_low: float = -np.inf, co_high: float = np.inf
+) -> BumpData:
     """Cut out one record over the bumps in use, from the first baseline to the last hold.
 
     Parameters
@@ -143,6 +145,8 @@ def bump_data(log: Log, bumps: Sequence[Bump]) -> BumpData:
     log : Log
     bumps : sequence of Bump
         At least one of them in use.
+    co_low, co_high : float
+        Limits of the output [CO unit]: what is logged beyond them never reached the process.
 
     Returns
     -------
@@ -160,6 +164,7 @@ def bump_data(log: Log, bumps: Sequence[Bump]) -> BumpData:
     inside = (log.t >= run[0].start_s) & (log.t <= run[-1].end_s)
     first, last = np.flatnonzero(inside)[[0, -1]]
     t, pv, co = log.t[first : last + 1], log.pv[first : last + 1], log.co[first : last + 1]
+    co = np.clip(co, co_low, co_high)
     new = np.concatenate([[True], np.diff(co) != 0.0])
     seen = np.isfinite(pv)
     if np.count_nonzero(seen) < _FEWEST_ROWS:

@@ -123,7 +123,8 @@ def commission(path: Path, *, request: Request) -> Record:
     choice: Choice | None = None
     recommended: Recommended | None = None
     if seen.quality.verdict != "do not use":
-        choice = choose(bump_data(seen.log, seen.bumps))
+        low, high = sheet.co_limits()
+        choice = choose(bump_data(seen.log, seen.bumps, co_low=low, co_high=high))
         if not _stopped(cautions(_facts(seen, sheet, asked, choice, None, {}))):
             recommended = recommend(choice, asked, log_interval=seen.log.interval)
     return _record(seen, sheet, asked, choice, recommended)

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import difflib
 import itertools
+import math
 import re
 import tomllib
 from pathlib import Path
@@ -256,6 +257,13 @@ class LoopSheet(_Table):
     limits: LimitsTable = LimitsTable()
     people: PeopleTable = PeopleTable()
     references: ReferencesTable = ReferencesTable()
+
+    def co_limits(self) -> tuple[float, float]:
+        """Give the limits of the output: those stated, or its range, or none [CO unit]."""
+        stated, span = self.limits, self.co
+        lows = [v for v in (stated.co_low, span.low) if v is not None]
+        highs = [v for v in (stated.co_high, span.high) if v is not None]
+        return max(lows, default=-math.inf), min(highs, default=math.inf)
 
 
 def load_sheet(path: str | Path) -> LoopSheet:

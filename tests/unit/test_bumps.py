@@ -76,3 +76,9 @@ def test_the_record_is_what_was_logged():
     np.testing.assert_array_equal(data.pv, pv[np.isfinite(pv)])
     assert data.co_times.tolist() == [0, 50, 120]
     assert data.co_values.tolist() == [40, 45, 38]
+
+
+def test_an_output_asked_beyond_its_limits_stays_at_them():
+    log = make(steps((0, 90), (50, 108), (120, 92)))
+    data = bump_data(log, find_bumps(log), co_low=0.0, co_high=100.0)
+    assert data.co_values.tolist() == [90, 100, 92]
