@@ -226,8 +226,8 @@ def _notes(
         notes.append(
             (
                 "load-step",
-                f"The PV moved by {load.size:.2g} from {load.at:.4g} s on with no move of the output to "
-                f"explain it. {done}",
+                f"The PV moved by {load.size:.2g} of its units from {load.at:.4g} s on with no move of the "
+                f"output to explain it. {done}",
             )
         )
     if problem.settling:
@@ -242,7 +242,7 @@ def _unlike(moves: GainsByMove) -> str:
     said = f"The moves were not answered alike: {shares} of the largest gain, in their order. "
     if moves.dead_band > 0.0:
         said += (
-            f"A dead band of {moves.dead_band:.2g} of the output, lost at each reversal, would explain it: "
-            "check the valve. "
+            f"A dead band of {moves.dead_band:.2g} of the output's units, lost at each reversal, would "
+            "explain it: check the valve. "
         )
     return said + "The largest gain is used, which is the safe one; expect slower control elsewhere."
