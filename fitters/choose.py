@@ -9,6 +9,7 @@ import numpy as np
 
 from fitters.estimate import as_screened, resettle, screen, settle
 from fitters.fit import Candidate, Choice
+from fitters.holdout import missed_share
 from fitters.intervals import covariance_of, to_fit
 from fitters.noise import WHITE, colour
 from fitters.prepare import ARITHMETIC, prepare
@@ -93,6 +94,7 @@ def choose(data: BumpData) -> Choice:
         reason=_reason(candidates),
         data=problem.data,
         gain_scatter=gain_scatter(prepared.gains),
+        missed_share=missed_share(problem if drift_kept else driftless, scored[0][1], noise),
     )
 
 

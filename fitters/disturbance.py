@@ -78,7 +78,7 @@ def load_step(problem: Problem, estimate: Estimate, before: Noise | None = None)
     LoadStep or None
         None where slow noise explains the residual as well.
     """
-    lag = _lag(estimate, problem)
+    lag = max(estimate.slowest, 2.0 * problem.data.interval)
     times = _times(problem, estimate.dead_time, lag)
     if times.size == 0:
         return None
@@ -124,13 +124,6 @@ def _stands_out(problem: Problem, wider: NDArray[np.float64], factor: float, bef
     whitened = Whitener(problem.t, before, problem.weight)(wider.T).T
     variance = whitened_covariance(whitened, before)[-1, -1]
     return bool(abs(factor) > _STANDS_OUT * np.sqrt(variance))
-
-
-def _lag(estimate: Estimate, problem: Problem) -> float:
-    """Give the sum of the lags, or a dead time where there are none [s]."""
-    poles = estimate.structure.model(estimate.search, estimate.gains, 0.0).poles
-    slow = np.abs(poles[poles != 0.0])
-    return float(np.sum(1.0 / slow)) if slow.size else max(estimate.dead_time, 2.0 * problem.data.interval)
 
 
 def _times(problem: Problem, dead_time: float, lag: float) -> NDArray[np.float64]:

@@ -92,6 +92,13 @@ class Estimate:
     rival_dead_times: tuple[float, ...]
     dead_time_fixed: bool
 
+    @property
+    def slowest(self) -> float:
+        """Sum of the lags; the dead time where there are none [s]."""
+        poles = self.structure.model(self.search, self.gains, 0.0).poles
+        slow = np.abs(poles[poles != 0.0])
+        return float(np.sum(1.0 / slow)) if slow.size else max(self.dead_time, 0.0)
+
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Screened:

@@ -214,6 +214,9 @@ class Choice:
     gain_scatter : float or None
         Relative standard uncertainty of the gain from how the moves disagree, where they were
         not scaled [1]; None with fewer than three moves.
+    missed_share : float or None
+        How far a fit without the last move misses its answer, as a share of it [1]; None where
+        the part before tells too little.
     """
 
     best: Fit
@@ -221,3 +224,4 @@ class Choice:
     reason: str
     data: BumpData
     gain_scatter: float | None
+    missed_share: float | None

@@ -38,6 +38,7 @@ RULES: tuple[Callable[[Facts], Caution | None], ...] = (
     structure.lag_or_integrator,
     structure.rival_changes_gain,
     structure.moves_scatter,
+    structure.last_move_missed,
     general.motion,
     general.units_matter,
     general.permit,

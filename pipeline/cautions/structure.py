@@ -17,6 +17,8 @@ _ALIKE = 6.0
 _GAIN_CHANGE = 0.10
 #: Relative standard uncertainty of the gain from how the moves disagree, above which it restricts [1].
 _SCATTER = 0.08
+#: A last move missed by more than this share of its answer does not bear the model out (common practice) [1].
+_MISSED = 0.15
 
 
 def not_settled(facts: Facts) -> Caution | None:
@@ -93,6 +95,21 @@ def moves_scatter(facts: Facts) -> Caution | None:
         "change with the level or the direction; more moves would tell.",
         value=scatter,
         limit=_SCATTER,
+    )
+
+
+def last_move_missed(facts: Facts) -> Caution | None:
+    """Say that the model, fitted without the last move, does not foretell it."""
+    if facts.choice is None or facts.choice.missed_share is None or facts.choice.missed_share <= _MISSED:
+        return None
+    return Caution(
+        code="last-move-missed",
+        level="care",
+        text=f"Fitted without the last move, the model misses that move's answer by "
+        f"{100.0 * facts.choice.missed_share:.0f} % of it: the moves do not tell the same story. "
+        "Look for a change of load, level or direction, and repeat the test.",
+        value=facts.choice.missed_share,
+        limit=_MISSED,
     )
 
 

@@ -62,6 +62,7 @@ def test_a_gain_that_changes_with_level_is_never_simply_ready():
     assert record.verdict == "ready with cautions"
     codes = {c.code for c in record.cautions}
     assert codes & {"gain-uncertain", "gain-differs-between-moves", "gain-scatters-between-moves"}
+    assert "last-move-missed" in codes
 
 
 @pytest.mark.parametrize(

@@ -81,3 +81,10 @@ def test_a_test_of_half_a_lag_is_said_not_to_know_the_final_gain(tmp_path):
     short = facts_of(short_test(1, noise=0.03, lags=0.5), tmp_path / "short.csv")
     assert short.choice.best.structure == "first order"
     assert "final gain is not" in rules.not_settled(short).text
+
+
+def test_a_last_move_the_model_does_not_foretell_is_said(facts):
+    assert facts.choice.missed_share < 0.02
+    missed = replace(facts.choice, missed_share=0.59)
+    assert "59 %" in rules.last_move_missed(replace(facts, choice=missed)).text
+    assert rules.last_move_missed(facts) is None
