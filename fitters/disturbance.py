@@ -85,6 +85,7 @@ def load_step(problem: Problem, estimate: Estimate, before: Noise | None = None)
     root = np.sqrt(problem.weight)
     residual = root * estimate.residual[problem.used]
     basis = np.linalg.qr(root[:, None] * estimate.jacobian)[0]
+    residual -= basis @ (basis.T @ residual)  # lags taken from a part do not fit the whole best
     tau = problem.t - times[:, None]
     values = estimate.structure.values(np.maximum(tau, 0.0), list(estimate.search))[0]
     answers = root * np.where(tau > 0.0, values, 0.0)
