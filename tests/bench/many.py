@@ -53,6 +53,18 @@ def intervals_of(name, seed, wanted, **log):
     return np.array([[p.value, p.low, p.high] for p in found]), chosen
 
 
+def model_of(name, seed, **log):
+    """Give the fitted process of the true structure and whether it was chosen."""
+    fit, chosen = fit_of(name, seed, **log)
+    return fit.model, chosen
+
+
+def models(name, *, logs=LOGS, **log):
+    """Give the fitted processes, and the share of logs where the structure was chosen."""
+    out = Parallel(n_jobs=2)(delayed(model_of)(name, seed, **log) for seed in range(logs))
+    return [o[0] for o in out], float(np.mean([o[1] for o in out]))
+
+
 def many(name, wanted, *, logs=LOGS, **log):
     """Give (logs, p, 3) values and interval ends, and the share of logs where the structure was chosen."""
     jobs = (delayed(intervals_of)(name, seed, wanted, **log) for seed in range(logs))

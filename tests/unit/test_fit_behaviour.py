@@ -240,7 +240,9 @@ def test_a_dead_band_in_the_valve_spoils_a_plain_fit_as_the_trade_knows():
     assert moves.problem.held.size[1] / moves.problem.held.size[0] == pytest.approx(-0.8, abs=0.02)
 
 
-@pytest.mark.parametrize(("at", "share"), [(90.0, 0.1), (90.0, 0.2), (220.0, 0.2), (220.0, 0.4), (350.0, 0.3)])
+@pytest.mark.parametrize(
+    ("at", "share"), [(90.0, 0.1), (90.0, 0.2), (220.0, 0.2), (220.0, 0.4), (350.0, 0.3)]
+)
 def test_a_load_that_changes_in_the_test_is_found_and_the_part_before_it_fitted(at, share):
     """Steps of 10 to 40 % of the PV's move, in each hold."""
     load = share * 10.0 / 2.0 * PLANT.step_response(T - at)
