@@ -289,20 +289,24 @@ def _drawer(
     """
     k = estimate.structure.searched
     gains = estimate.gains
-    finite = np.where(np.isfinite(cov), cov, 0.0)
-    for i in range(cov.shape[0]):
-        if np.isinf(cov[i, i]):
-            finite[i, i] = _UNKNOWN_LOG_SD**2 if i < k else (10.0 * max(abs(gains[i - k - 1]), 1e-12)) ** 2
-    sd_gains = np.sqrt(np.diag(finite)[k + 1 :])
-    by_log = np.abs(gains) > _SURE_OF_SIGN * sd_gains
-    scale = np.ones(cov.shape[0])
-    scale[k + 1 :][by_log] = 1.0 / gains[by_log]
-    scaled = finite * np.outer(scale, scale)
-    weights, vectors = np.linalg.eigh(scaled)
-    root = vectors * np.sqrt(np.maximum(weights, 0.0))
     structure = estimate.structure
 
     def draw(count: int, seed: int) -> tuple[ProcessModel, ...]:
+        finite = np.where(np.isfinite(cov), cov, 0.0)
+        for i in range(cov.shape[0]):
+            if np.isinf(cov[i, i]) and i < k:
+                finite[i, i] = _UNKNOWN_LOG_SD**2
+            elif np.isinf(cov[i, i]) and i == k:
+                finite[i, i] = max(estimate.dead_time, estimate.slowest) ** 2
+            elif np.isinf(cov[i, i]):
+                finite[i, i] = (10.0 * max(abs(gains[i - k - 1]), 1e-12)) ** 2
+        sd_gains = np.sqrt(np.diag(finite)[k + 1 :])
+        by_log = np.abs(gains) > _SURE_OF_SIGN * sd_gains
+        scale = np.ones(cov.shape[0])
+        scale[k + 1 :][by_log] = 1.0 / gains[by_log]
+        scaled = finite * np.outer(scale, scale)
+        weights, vectors = np.linalg.eigh(scaled)
+        root = vectors * np.sqrt(np.maximum(weights, 0.0))
         rng = np.random.default_rng(seed)
         normal = rng.standard_normal((count, root.shape[1]))
         stretch = np.sqrt(degrees / rng.chisquare(degrees, count))
