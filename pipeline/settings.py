@@ -78,6 +78,12 @@ class ColumnsTable(_Table):
         return self
 
 
+class FileTable(_Table):
+    """[file]: how the log file is written."""
+
+    decimal: Literal[".", ","] | None = None
+
+
 class TimeTable(_Table):
     """[time]: how the log writes its times."""
 
@@ -232,11 +238,12 @@ class LoopSheet(_Table):
 
     Attributes
     ----------
-    loop, columns, time, pv, co, controller, as_found, criteria, limits, people, references
+    loop, file, columns, time, pv, co, controller, as_found, criteria, limits, people, references
         One frozen table each; a key that was not given is None.
     """
 
     loop: LoopTable = LoopTable()
+    file: FileTable = FileTable()
     columns: ColumnsTable = ColumnsTable()
     time: TimeTable = TimeTable()
     pv: RangeTable = RangeTable()

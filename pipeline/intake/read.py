@@ -61,7 +61,7 @@ def read_log(path: str | Path, *, sheet: LoopSheet = _NOTHING_SAID) -> Log:
         If the sheet names a column the file does not have.
     """
     text = read_text(path)
-    layout = find_layout(text.lines, file=text.file)
+    layout = find_layout(text.lines, file=text.file, decimal=sheet.file.decimal)
     fields = read_table(text.lines, layout, file=text.file)
     wanted = sheet.columns
     named = {
@@ -83,7 +83,9 @@ def read_log(path: str | Path, *, sheet: LoopSheet = _NOTHING_SAID) -> Log:
     )
     for field in (roles.pv, roles.co):
         _need_numbers(field, text.file, layout.body)
-    notes = [*text.notes, *layout.notes, *clock.notes, *order.notes, *roles.notes]
+    shown = [roles.pv, roles.co, *(f for f in (roles.sp, roles.mode) if f)]
+    cells = [Caution(code="cell-form", level="note", text=guess) for f in shown for guess in f.guesses]
+    notes = [*text.notes, *layout.notes, *clock.notes, *order.notes, *cells, *roles.notes]
     return _assemble(
         text.file, text.name, text.sha256, sheet, clock, roles, order.rows, notes, len(layout.body)
     )
