@@ -188,12 +188,15 @@ def _check(
     )
 
 
+def _numbers(text: pd.Series) -> pd.Series:
+    numbers = pd.to_numeric(text, errors="coerce").to_numpy(dtype=np.float64, na_value=np.nan)
+    return pd.Series(numbers, index=text.index)
+
+
 def _seconds_of_day(text: pd.Series) -> NDArray[np.float64]:
     """Read h:mm, h:mm:ss and both with am or pm; NaN where a cell is none of them [s]."""
     parts = text.str.replace(",", ".", regex=False).str.extract(_HALVES)
-    h, m, s = (
-        pd.to_numeric(parts[k], errors="coerce").to_numpy(np.float64, na_value=np.nan) for k in range(3)
-    )
+    h, m, s = (_numbers(parts[k]).to_numpy() for k in range(3))
     half = parts[3].str.lower().to_numpy(dtype=object, na_value="")
     h = np.where(half == "", h, np.mod(h, 12.0) + 12.0 * (half == "p"))
     return np.asarray(h * 3600.0 + m * 60.0 + np.nan_to_num(s), dtype=np.float64)
@@ -216,9 +219,9 @@ def _times_of_day(
 def _local(text: pd.Series, field: Field, lines: Sequence[int], file: str) -> tuple[pd.Series, Caution]:
     """Read dates whose day and month stand in an order the log must give away."""
     parts = text.str.extract(_LOCAL)
-    a = pd.to_numeric(parts["a"], errors="coerce")
-    b = pd.to_numeric(parts["b"], errors="coerce")
-    year = pd.to_numeric(parts["year"], errors="coerce")
+    a = _numbers(parts["a"])
+    b = _numbers(parts["b"])
+    year = _numbers(parts["year"])
     clock = _seconds_of_day(parts["clock"].fillna("0:00"))
     dotted = bool((parts["mark"].dropna() == ".").all())
     day_first, month_first = bool((a > 12).any()), bool((b > 12).any())
@@ -281,9 +284,9 @@ def _with_month_names(text: pd.Series) -> pd.Series:
     parts = text.str.extract(pattern)
     names = {name: _month(str(name)) for name in parts["b"].dropna().unique()}
     return _dated(
-        pd.to_numeric(parts["a"], errors="coerce"),
-        pd.to_numeric(parts["b"].map(names), errors="coerce"),
-        pd.to_numeric(parts["year"], errors="coerce"),
+        _numbers(parts["a"]),
+        _numbers(parts["b"].map(names)),
+        _numbers(parts["year"]),
         _seconds_of_day(parts["clock"].fillna("0:00")),
     )
 
