@@ -79,6 +79,12 @@ class ColumnsTable(_Table):
         return self
 
 
+class FileTable(_Table):
+    """[file]: how the log file is written."""
+
+    decimal: Literal[".", ","] | None = None
+
+
 class TimeTable(_Table):
     """[time]: how the log writes its times."""
 
@@ -241,11 +247,12 @@ class LoopSheet(_Table):
 
     Attributes
     ----------
-    loop, columns, time, pv, co, controller, as_found, criteria, uncertainty, limits, people, references
+    loop, file, columns, time, pv, co, controller, as_found, criteria, uncertainty, limits, people, references
         One frozen table each; a key that was not given is None.
     """
 
     loop: LoopTable = LoopTable()
+    file: FileTable = FileTable()
     columns: ColumnsTable = ColumnsTable()
     time: TimeTable = TimeTable()
     pv: RangeTable = RangeTable()

@@ -2,41 +2,23 @@
 
 from __future__ import annotations
 
-import csv
-import re
 from collections import Counter
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
-from pipeline.errors import LogUnreadable
+from pipeline.errors import LogUnreadable, QuestionForUser
 from pipeline.findings import Caution
-from pipeline.intake.names import is_unit, split_unit
+from pipeline.intake.cells import decimal_mark, is_missing, is_number, is_stamp
+from pipeline.intake.header import COMMENT, holds_data, read_header, split_cells
 
-_MARKS = """- -- --- * ? nan na n/a null none nil bad invalid error err fault timeout inf -inf +inf infinity
-+infinity -infinity 1.#j 1.#inf -1.#inf 1.#ind -1.#ind 1.#qnan #n/a #value! #num! #div/0! overflow over under
-shutdown"""
-_MARKS = (
-    "-|--|---|*|?|nan|na|n/a|null|none|nil|bad|bad input|bad quality|no data|invalid|error|err|fault|timeout"
-    "|i/o timeout|inf|-inf|+inf|infinity|-infinity|1.#j|1.#inf|-1.#inf|1.#ind|-1.#ind|1.#qnan|#n/a|#value!"
-    "|#num!|#div/0!|overflow|over|under|shutdown|not connected"
-)
 #: Letters of a bad cell that a message shows.
 _SHOWN = 20
-#: Cells that stand for "no value": blanks and what loggers write for a bad reading.
-MISSING = ("", *_MARKS.split("|"))
-
 #: Delimiters in order of preference: a blank also stands inside dates and names, a comma inside numbers.
 _DELIMITERS = ("\t", ";", ",", "|", " ")
 #: Share of the rows that may have another number of fields and be set aside [1].
 _STRAY_SHARE = 0.01
 #: Lines looked at to decide on the layout: enough to outvote preambles and footers.
 _SAMPLE_LINES = 60
-
-_NUMBER = re.compile(r"[-+]?(\d+([.,]\d*)?|[.,]\d+)([eE][-+]?\d+)?\s*%?$")
-_STAMP = re.compile(
-    r"(\d{1,4}[-/.]\d{1,2}[-/.]\d{1,4}([ T]+\d.*)?|\d{1,3}:\d{2}(:\d{2})?([.,]\d+)?(\s*[AaPp]\.?[Mm]\.?)?)$"
-)
-_COMMENT = ("#", "%", "//", "!")
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -71,38 +53,7 @@ class Layout:
     notes: tuple[Caution, ...]
 
 
-def is_number(cell: str) -> bool:
-    """Tell whether a cell is written as a number, with point or comma."""
-    return _NUMBER.match(cell) is not None
-
-
-def split_cells(line: str, delimiter: str) -> list[str]:
-    """Take a line apart, quotation marks respected, cells stripped.
-
-    Parameters
-    ----------
-    line : str
-    delimiter : str
-    """
-    if delimiter == " ":
-        return line.split()
-    if '"' in line:
-        try:
-            return [
-                cell.strip() for cell in next(csv.reader([line], delimiter=delimiter, skipinitialspace=True))
-            ]
-        except (csv.Error, StopIteration):
-            pass
-    return [cell.strip() for cell in line.split(delimiter)]
-
-
-def _holds_data(cells: Sequence[str]) -> bool:
-    full = [cell for cell in cells if cell.lower() not in MISSING]
-    good = sum(is_number(cell) or _STAMP.match(cell) is not None for cell in full)
-    return bool(full) and good > 0.5 * len(full)
-
-
-def find_layout(lines: Sequence[str], *, file: str) -> Layout:
+def find_layout(lines: Sequence[str], *, file: str, decimal: str | None = None) -> Layout:
     """Work out how a log is written.
 
     Parameters
@@ -111,6 +62,8 @@ def find_layout(lines: Sequence[str], *, file: str) -> Layout:
         Lines of the file, without their ends.
     file : str
         Name for messages.
+    decimal : str or None
+        Decimal mark, "." or ",", where the user says it.
 
     Returns
     -------
@@ -120,29 +73,30 @@ def find_layout(lines: Sequence[str], *, file: str) -> Layout:
     ------
     LogUnreadable
         If there are no rows of numbers, only one column, or rows of many widths.
+    QuestionForUser
+        If a comma may be a decimal or a thousands mark.
     """
     filled = [i for i, line in enumerate(lines) if line.strip()]
-    plain = [i for i in filled if not lines[i].lstrip().startswith(_COMMENT)]
+    plain = [i for i in filled if not lines[i].lstrip().startswith(COMMENT)]
     tail = plain[len(plain) // 4 :]
     sample = [lines[i] for i in tail[:: max(1, len(tail) // _SAMPLE_LINES)]]
     delimiter, width = _find_delimiter(sample, lines, filled, file)
     first = _first_data(lines, plain, delimiter, width)
     if first is None:
         raise _no_numbers(lines, filled, file)
-    names, units, headed, header_at, notes = _header(
-        lines, [i for i in filled if i < first], delimiter, width
-    )
-    body, skipped = _body(lines, [i for i in plain if i >= first], delimiter, width, header_at, file)
-    decimal, comma_note = _decimal([lines[i] for i in body[:: max(1, len(body) // _SAMPLE_LINES)]], delimiter)
+    header = read_header(lines, [i for i in filled if i < first], delimiter, width)
+    body, skipped = _body(lines, [i for i in plain if i >= first], delimiter, width, header.lines, file)
+    sampled = [lines[i] for i in body[:: max(1, len(body) // _SAMPLE_LINES)]]
+    mark, comma_note = _decimal(sampled, delimiter, decimal, file)
     return Layout(
         delimiter=delimiter,
-        decimal=decimal,
+        decimal=mark,
         width=width,
-        names=names,
-        units=units,
-        headed=headed,
+        names=header.names,
+        units=header.units,
+        headed=header.headed,
         body=tuple(i + 1 for i in body),
-        notes=(*notes, *skipped, *comma_note),
+        notes=(*header.notes, *skipped, *comma_note),
     )
 
 
@@ -156,10 +110,10 @@ def _find_delimiter(
         if not widths:
             continue
         width, votes = widths.most_common(1)[0]
-        cells = [c for row in rows if len(row) == width for c in row if c.lower() not in MISSING]
+        cells = [c for row in rows if len(row) == width for c in row if not is_missing(c)]
         if width < 2 or not cells:
             continue
-        good = sum(is_number(c) or _STAMP.match(c) is not None for c in cells) / len(cells)
+        good = sum(is_number(c) or is_stamp(c) for c in cells) / len(cells)
         score = votes / len(rows) * good
         # a later delimiter must be clearly better: every blank-separated date would be
         if score > best_score + 0.05:
@@ -181,7 +135,7 @@ def _no_numbers(lines: Sequence[str], filled: Sequence[int], file: str) -> LogUn
     for i in filled[1:2]:  # the first line below the names, cell by cell
         delimiter = max(",;\t", key=lines[i].count)
         for place, cell in enumerate(split_cells(lines[i], delimiter), start=1):
-            if lines[i].count(delimiter) and not is_number(cell) and _STAMP.match(cell) is None:
+            if lines[i].count(delimiter) and not is_number(cell) and not is_stamp(cell):
                 return LogUnreadable(
                     f'The file holds no rows of numbers: "{cell[:_SHOWN]}" stands where one should be.',
                     file=file,
@@ -205,74 +159,13 @@ def _first_data(lines: Sequence[str], plain: Sequence[int], delimiter: str, widt
     def fits(k: int) -> bool:
         if k not in verdicts:
             cells = split_cells(lines[plain[k]], delimiter)
-            verdicts[k] = abs(len(cells) - width) <= 1 and _holds_data(cells)
+            verdicts[k] = abs(len(cells) - width) <= 1 and holds_data(cells)
         return verdicts[k]
 
     for k in range(len(plain)):
         if fits(k) and all(fits(j) for j in range(k + 1, min(k + 1 + ahead, len(plain)))):
             return plain[k]
     return None
-
-
-def _header_cells(line: str, delimiter: str, width: int) -> list[str]:
-    text = line.strip().lstrip("\ufeff")
-    for mark in _COMMENT:
-        if text.startswith(mark):
-            text = text.lstrip(mark[0]).strip()
-    if delimiter != " ":
-        return split_cells(text, delimiter)
-    # names may hold single blanks where columns are set apart by several
-    for pattern in (r"\s{2,}|\t", r"\s+", r"\s*[,;]\s*"):
-        cells = [cell for cell in re.split(pattern, text) if cell]
-        if len(cells) == width:
-            return cells
-    return []
-
-
-def _header(
-    lines: Sequence[str], above: Sequence[int], delimiter: str, width: int
-) -> tuple[tuple[str, ...], tuple[str | None, ...], bool, int | None, list[Caution]]:
-    """Read the header from the lines above the data, nearest first."""
-    notes: list[Caution] = []
-    rows = [(i, _header_cells(lines[i], delimiter, width)) for i in reversed(above[-3:])]
-    unit_row: list[str] = []
-    if len(rows) > 1 and len(rows[0][1]) >= 2 and len(rows[1][1]) >= 2:
-        filled = [cell for cell in rows[0][1] if cell]
-        if filled and all(is_unit(cell) for cell in filled):
-            unit_row, rows = rows[0][1], rows[1:]
-    cells: list[str] = []
-    header_at = None
-    if rows and len(rows[0][1]) >= 2 and not _holds_data(rows[0][1]):
-        header_at, cells = rows[0]
-    count = sum(1 for i in above if header_at is None or i < header_at)
-    if count:
-        notes.append(
-            Caution(
-                code="preamble",
-                level="note",
-                text=f"{count} {'line' if count == 1 else 'lines'} above the table skipped.",
-                value=float(count),
-            )
-        )
-    if len([c for c in cells if c]) > width:
-        notes.append(
-            Caution(
-                code="header-longer",
-                level="note",
-                text=f"The header names {len(cells)} columns and the rows hold {width}; the first "
-                f"{width} names were used.",
-                value=float(len(cells)),
-                limit=float(width),
-            )
-        )
-    names: list[str] = []
-    units: list[str | None] = []
-    for k in range(width):
-        name = cells[k] if k < len(cells) and cells[k] else f"column {k + 1}"
-        given = unit_row[k].strip("[]() ") if k < len(unit_row) and unit_row[k].strip("[]() -") else None
-        names.append(name)
-        units.append(given or split_unit(name)[1])
-    return tuple(names), tuple(units), bool(cells), header_at, notes
 
 
 def _counter(delimiter: str) -> Callable[[str], int]:
@@ -289,18 +182,17 @@ def _body(
     candidates: Sequence[int],
     delimiter: str,
     width: int,
-    header_at: int | None,
+    header: frozenset[str],
     file: str,
 ) -> tuple[list[int], list[Caution]]:
     """Keep the data rows; set aside repeated headers and a few stray lines, counted."""
     count = _counter(delimiter)
-    header = lines[header_at].strip() if header_at is not None else None
     body: list[int] = []
     stray: list[int] = []
     repeated = 0
     for i in candidates:
         fields = count(lines[i])
-        if header is not None and lines[i].strip() == header:
+        if lines[i].strip() in header:
             repeated += 1
         elif fields == width or (fields > width and not any(split_cells(lines[i], delimiter)[width:])):
             body.append(i)
@@ -339,18 +231,24 @@ def _body(
     return body, notes
 
 
-def _decimal(sample: Sequence[str], delimiter: str) -> tuple[str, list[Caution]]:
-    if delimiter == ",":
-        return ".", []
-    numbers = [c for line in sample for c in split_cells(line, delimiter) if is_number(c)]
-    commas = [c for c in numbers if "," in c]
-    if not commas or any("." in c for c in numbers):
-        return ".", []
-    shown = commas[0]
-    return ",", [
+def _decimal(sample: Sequence[str], delimiter: str, said: str | None, file: str) -> tuple[str, list[Caution]]:
+    rows = [split_cells(line, delimiter) for line in sample]
+    columns = [[row[k] for row in rows if k < len(row)] for k in range(max(map(len, rows), default=0))]
+    mark = said or decimal_mark(columns)
+    shown = next((c for cells in columns for c in cells if is_number(c) and "," in c), "")
+    if mark is None:
+        raise QuestionForUser(
+            f'"{shown}" may be {shown.replace(",", ".")} or {shown.replace(",", "")}.',
+            file=file,
+            remedy='Say which in the loop sheet: [file] decimal = "," where the comma is the decimal mark, '
+            '[file] decimal = "." where it parts the thousands.',
+        )
+    if mark == "." or not shown:
+        return mark, []
+    return mark, [
         Caution(
             code="decimal-comma",
             level="note",
-            text=f"Decimal commas: {shown} was read as {shown.replace(',', '.')}.",
+            text=f"Decimal commas: {shown} was read as {shown.replace('.', '').replace(',', '.')}.",
         )
     ]

@@ -15,7 +15,8 @@ from pipeline.findings import Caution
 from pipeline.intake.clock import Clock, read_clock
 from pipeline.intake.layout import find_layout
 from pipeline.intake.log import Column, Log
-from pipeline.intake.names import split_unit
+from pipeline.intake.mode import read_mode
+from pipeline.intake.names import read_name, split_unit
 from pipeline.intake.order import settle_order
 from pipeline.intake.roles import Roles, assign_roles
 from pipeline.intake.table import Field, read_table
@@ -31,9 +32,6 @@ MIN_ROWS = 30
 _MANY_MISSING = 0.05
 
 _NOTHING_SAID = LoopSheet()
-
-_AUTOMATIC = frozenset({"a", "auto", "automatic", "cas", "cascade", "rcas", "c", "automatik"})
-_MANUAL = frozenset({"m", "man", "manual", "hand", "iman", "rman", "off", "rout"})
 
 
 def read_log(path: str | Path, *, sheet: LoopSheet = _NOTHING_SAID) -> Log:
@@ -61,7 +59,7 @@ def read_log(path: str | Path, *, sheet: LoopSheet = _NOTHING_SAID) -> Log:
         If the sheet names a column the file does not have.
     """
     text = read_text(path)
-    layout = find_layout(text.lines, file=text.file)
+    layout = find_layout(text.lines, file=text.file, decimal=sheet.file.decimal)
     fields = read_table(text.lines, layout, file=text.file)
     wanted = sheet.columns
     named = {
@@ -79,11 +77,19 @@ def read_log(path: str | Path, *, sheet: LoopSheet = _NOTHING_SAID) -> Log:
     for key in ("pv", "co", "sp"):
         _need_numbers(named[key], text.file, layout.body)
     roles = assign_roles(
-        rest, order.rows, pv=named["pv"], co=named["co"], sp=named["sp"], mode=named["mode"], file=text.file
+        _of_the_tag(rest, sheet.loop.tag),
+        order.rows,
+        pv=named["pv"],
+        co=named["co"],
+        sp=named["sp"],
+        mode=named["mode"],
+        file=text.file,
     )
     for field in (roles.pv, roles.co):
         _need_numbers(field, text.file, layout.body)
-    notes = [*text.notes, *layout.notes, *clock.notes, *order.notes, *roles.notes]
+    shown = [roles.pv, roles.co, *(f for f in (roles.sp, roles.mode) if f)]
+    cells = [Caution(code="cell-form", level="note", text=guess) for f in shown for guess in f.guesses]
+    notes = [*text.notes, *layout.notes, *clock.notes, *order.notes, *cells, *roles.notes]
     return _assemble(
         text.file, text.name, text.sha256, sheet, clock, roles, order.rows, notes, len(layout.body)
     )
@@ -124,6 +130,18 @@ def _look_up(fields: Sequence[Field], name: ColumnName | None, key: str, file: s
         column=name,
         remedy=f"It has: {', '.join(names[:12])}.{hint}",
     )
+
+
+def _of_the_tag(fields: Sequence[Field], tag: str | None) -> Sequence[Field]:
+    """Keep the columns that carry the loop's tag, where they make a whole loop."""
+    plain = _letters(tag or "")
+    tagged = [f for f in fields if plain and plain in _letters(f.name)]
+    roles = {read_name(f.name, f.unit).role for f in tagged if f.values is not None and not f.empty}
+    return tagged if {"pv", "co"} <= roles else fields
+
+
+def _letters(text: str) -> str:
+    return "".join(c for c in text.casefold() if c.isalnum())
 
 
 def _need_numbers(field: Field | None, file: str, lines: Sequence[int]) -> None:
@@ -188,7 +206,7 @@ def _assemble(
     notes.extend(_missing(roles, rows, pv))
     automatic = None
     if roles.mode is not None:
-        automatic, note = _automatic(roles.mode, rows)
+        automatic, note = read_mode(roles.mode, rows, co)
         notes.extend(note)
     t = clock.t[rows] - clock.t[rows[0]]
     return Log(
@@ -251,32 +269,3 @@ def _missing(roles: Roles, rows: NDArray[np.intp], pv: NDArray[np.float64]) -> l
             )
         )
     return notes
-
-
-def _automatic(field: Field, rows: NDArray[np.intp]) -> tuple[NDArray[np.bool_] | None, list[Caution]]:
-    if field.text is None:
-        return None, [
-            Caution(
-                code="mode-codes",
-                level="care",
-                text=f'The mode column "{field.name}" holds numbers, and which of them is '
-                f"automatic is not known; it was "
-                "not used. Check that the controller was in manual.",
-            )
-        ]
-    words = field.text.str.lower().iloc[rows]
-    automatic = words.isin(_AUTOMATIC).to_numpy(dtype=bool)
-    known = automatic | words.isin(_MANUAL).to_numpy(dtype=bool)
-    if not np.any(known):
-        return None, [
-            Caution(
-                code="mode-codes",
-                level="care",
-                text=f'The mode column "{field.name}" holds words that are not known here '
-                f'("{words.dropna().iloc[0]}"); it '
-                "was not used. Check that the controller was in manual.",
-            )
-        ]
-    # blank or unknown cells keep the last known mode
-    last = np.maximum.accumulate(np.where(known, np.arange(known.size), int(np.argmax(known))))
-    return automatic[last], []

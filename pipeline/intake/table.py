@@ -12,7 +12,8 @@ import numpy as np
 import pandas as pd
 
 from pipeline.errors import LogUnreadable
-from pipeline.intake.layout import MISSING, Layout
+from pipeline.intake.cells import MISSING, to_numbers
+from pipeline.intake.layout import Layout
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -20,6 +21,11 @@ if TYPE_CHECKING:
 #: Magnitude above which a number is a marker for "no value", not a reading [any unit].
 #: Loggers fill with the largest number they have (1e38, 1e308); no process unit needs 1e30.
 _ABSURD = 1e30
+#: Round numbers that loggers write for "no value", by size [any unit]: fillers of 3 to 5 digits (common
+#: practice) and the ends of a 16-bit register.
+_SENTINELS = (999.0, 999.9, 999.99, 9999.0, 9999.9, 99999.0, 999999.0, 32767.0, 32768.0, 65535.0)
+#: Such a number is "no value" this many ranges away from all readings, on fewer rows than this share [1].
+_SENTINEL_FAR, _SENTINEL_SHARE = 3.0, 0.5
 
 _TOKENS = sorted(
     {t for word in MISSING for t in (word, word.upper(), word.capitalize(), word.title())} | {"NaN"}
@@ -44,6 +50,8 @@ class Field:
         Cells without a usable number (blank, bad, infinite, absurd).
     first_bad : int or None
         Line of the first cell holding text that is no number and no known mark for a bad reading.
+    guesses : tuple of str
+        How cells were taken that are no plain numbers, a sentence each.
     """
 
     index: int
@@ -53,6 +61,7 @@ class Field:
     text: pd.Series | None
     missing: int
     first_bad: int | None
+    guesses: tuple[str, ...] = ()
 
     @property
     def empty(self) -> bool:
@@ -98,7 +107,7 @@ def _parse(lines: Sequence[str], layout: Layout, file: str) -> pd.DataFrame:
                 names=list(range(layout.width)),
                 usecols=list(range(layout.width)),
                 index_col=False,
-                decimal=layout.decimal,
+                decimal="." if layout.delimiter == "," else layout.decimal,
                 skipinitialspace=True,
                 skip_blank_lines=False,
                 na_values=_TOKENS,
@@ -122,32 +131,58 @@ def _parse(lines: Sequence[str], layout: Layout, file: str) -> pd.DataFrame:
 def _field(series: pd.Series, k: int, layout: Layout) -> Field:
     text: pd.Series | None = None
     first_bad: int | None = None
+    guesses: list[str] = []
+    name, unit = layout.names[k], None
     values: NDArray[np.float64] | None
     if pd.api.types.is_numeric_dtype(series) and not pd.api.types.is_bool_dtype(series):
         values = series.to_numpy(dtype=np.float64, na_value=np.nan)
     else:
         text = series.astype("string").str.strip()
         text = text.mask(text.str.lower().isin(MISSING))
-        cells = text.str.replace(",", ".", regex=False) if layout.decimal == "," else text
-        numbers = pd.to_numeric(cells, errors="coerce").to_numpy(dtype=np.float64, na_value=np.nan)
+        numbers, unit, example = to_numbers(text, layout.decimal)
         written = text.notna().to_numpy(dtype=bool)
         bad = written & np.isnan(numbers)
         if np.any(bad):
             first_bad = layout.body[int(np.argmax(bad))]
         values = numbers if 2 * int(bad.sum()) < int(written.sum()) else None
+        if values is not None and example is not None:
+            guesses.append(f'In "{name}" the cell "{example[0]}" was read as {example[1]:.10g}.')
         if not np.any(written):
             values, text = np.full(len(series), np.nan), None
     missing = len(series)
     if values is not None:
         values = np.where(np.abs(values) <= _ABSURD, values, np.nan)
+        values, sentinel = _without_sentinels(values)
+        guesses.extend(f'In "{name}" {s}' for s in sentinel)
         values.setflags(write=False)
         missing = int(np.isnan(values).sum())
     return Field(
         index=k + 1,
-        name=layout.names[k],
-        unit=layout.units[k],
+        name=name,
+        unit=layout.units[k] or unit,
         values=values,
         text=text,
         missing=missing,
         first_bad=first_bad,
+        guesses=tuple(guesses),
     )
+
+
+def _without_sentinels(values: NDArray[np.float64]) -> tuple[NDArray[np.float64], list[str]]:
+    """Take out the round numbers loggers write for "no value", where they lie far from all readings."""
+    said: list[str] = []
+    known = values[np.isfinite(values)]
+    if known.size == 0 or not (known.max() >= _SENTINELS[0] or known.min() <= -_SENTINELS[0]):
+        return values, said
+    for mark in (m for size in _SENTINELS for m in (size, -size)):
+        at = values == mark
+        count = int(np.count_nonzero(at))
+        rest = values[np.isfinite(values) & ~at]
+        if not count or count > _SENTINEL_SHARE * known.size or rest.size == 0:
+            continue
+        low, high = float(rest.min()), float(rest.max())
+        if max(mark - high, low - mark) > _SENTINEL_FAR * max(high - low, 0.01 * abs(mark)):
+            values = np.where(at, np.nan, values)
+            cells = "cell holds" if count == 1 else "cells hold"
+            said.append(f'{count} {cells} {mark:g}, taken as "no value".')
+    return values, said
