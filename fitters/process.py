@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from functools import cached_property
+from math import isfinite
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -44,20 +45,21 @@ class ProcessModel:
     dead_time: float = 0.0
 
     def __post_init__(self) -> None:
-        num = np.trim_zeros(np.asarray(self.numerator, dtype=float), "f")
-        den = np.asarray(self.denominator, dtype=float)
-        if num.size == 0:
-            num = np.zeros(1)
-        if den.size == 0 or den[0] == 0.0:
+        # In plain Python: hundreds are drawn at a time, and arrays this small cost more to make.
+        num = tuple(float(c) for c in self.numerator) or (0.0,)
+        den = tuple(float(c) for c in self.denominator)
+        first = next((i for i, c in enumerate(num) if c != 0.0), len(num) - 1)
+        num = num[first:]
+        if not den or den[0] == 0.0:
             raise ValueError("A denominator must lead with a coefficient other than zero.")
-        if num.size > den.size:
+        if len(num) > len(den):
             raise ValueError("A process cannot have more zeros than poles.")
-        if not (np.all(np.isfinite(num)) and np.all(np.isfinite(den))):
+        if not all(isfinite(c) for c in (*num, *den)):
             raise ValueError("A process model needs finite coefficients.")
-        if not (np.isfinite(self.dead_time) and self.dead_time >= 0.0):
+        if not (isfinite(self.dead_time) and self.dead_time >= 0.0):
             raise ValueError("Dead time must be zero or more, and finite.")
-        object.__setattr__(self, "numerator", tuple(float(c) for c in num))
-        object.__setattr__(self, "denominator", tuple(float(c) for c in den))
+        object.__setattr__(self, "numerator", num)
+        object.__setattr__(self, "denominator", den)
         object.__setattr__(self, "dead_time", float(self.dead_time))
 
     def scaled(self, gain: float, lags: float, dead_time: float) -> ProcessModel:
@@ -68,23 +70,18 @@ class ProcessModel:
         gain, lags, dead_time : float
             Positive factors [1].
         """
-        den = np.asarray(self.denominator)
-        inner = den[: den.size - self.integrators]
-        num = np.asarray(self.numerator)
+        inner = self.denominator[: len(self.denominator) - self.integrators]
+        last, end = len(self.numerator) - 1, len(inner) - 1
         return ProcessModel(
-            numerator=tuple(gain * num * lags ** np.arange(num.size - 1.0, -1.0, -1.0)),
-            denominator=(
-                *(inner * lags ** np.arange(inner.size - 1.0, -1.0, -1.0)),
-                *([0.0] * self.integrators),
-            ),
+            numerator=tuple(gain * c * lags ** (last - i) for i, c in enumerate(self.numerator)),
+            denominator=(*(c * lags ** (end - i) for i, c in enumerate(inner)), *([0.0] * self.integrators)),
             dead_time=dead_time * self.dead_time,
         )
 
     @cached_property
     def integrators(self) -> int:
         """Number of poles at zero."""
-        den = np.asarray(self.denominator)
-        return int(den.size - np.trim_zeros(den, "b").size)
+        return next(i for i, c in enumerate(reversed(self.denominator)) if c != 0.0)
 
     @cached_property
     def gain(self) -> float:

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from scipy.special import gammainc
 
-from pipeline.loop.controller import extra_dead_time, feedback_path, setpoint_path
+from pipeline.loop.controller import extra_dead_time, feedback_path, setpoint_path, sign
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -62,13 +62,11 @@ def batch_setpoint(
     ----------
     Dubner and Abate (1968), Journal of the ACM 15, 115-123.
     """
-    m = max(len(models), len(controllers))
-    rows = [(models[i % len(models)], controllers[i % len(controllers)]) for i in range(m)]
-    sp_num, sp_den = (_stacked([setpoint_path(c)[i] for _, c in rows]) for i in (0, 1))
-    fb_num, fb_den = (_stacked([feedback_path(c)[i] for _, c in rows]) for i in (0, 1))
-    g_num = _stacked([np.asarray(g.numerator) for g, _ in rows])
-    g_den = _stacked([np.asarray(g.denominator) for g, _ in rows])
-    delay = np.array([g.dead_time + extra_dead_time(c) for g, c in rows])
+    sp_num, sp_den = (_stacked([setpoint_path(c)[i] for c in controllers]) for i in (0, 1))
+    fb_num, fb_den = (_stacked([feedback_path(c)[i] for c in controllers]) for i in (0, 1))
+    g_num, g_den = _stacked([g.numerator for g in models]), _stacked([g.denominator for g in models])
+    delay = np.array([g.dead_time for g in models]) + np.array([extra_dead_time(c) for c in controllers])
+    m = delay.size
     period = 2.0 * horizon
     count = 2 * points
     a = _DAMPING / period
@@ -102,12 +100,36 @@ def batch_setpoint(
     return np.asarray(t[:points], dtype=float), np.asarray(response[:, :points], dtype=float)
 
 
-def _stacked(polys: list[Reals]) -> Reals:
-    width = max(p.size for p in polys)
+def _stacked(polys: Sequence[Sequence[float] | Reals]) -> Reals:
+    width = max(len(p) for p in polys)
+    if all(len(p) == width for p in polys):
+        return np.array(polys, dtype=float)
     out = np.zeros((len(polys), width))
     for i, p in enumerate(polys):
-        out[i, width - p.size :] = p
+        out[i, width - len(p) :] = p
     return out
+
+
+def batch_final(models: Sequence[ProcessModel], controller: Controller) -> Reals:
+    """Give where each loop's unit set-point step ends.
+
+    Parameters
+    ----------
+    models : sequence of ProcessModel
+        All of one number of integrators; their loops stable.
+    controller : Controller
+
+    Returns
+    -------
+    (m,) ndarray
+        Final values [1]: one with integral action in the controller.
+    """
+    if np.isfinite(controller.integral_time) and controller.kind in ("I", "PI", "PID"):
+        return np.ones(len(models))
+    if models[0].integrators:
+        return np.full(len(models), controller.setpoint_weight)
+    loop = sign(controller.action) * controller.gain * np.array([g.gain for g in models])
+    return np.asarray(controller.setpoint_weight * loop / (1.0 + loop), dtype=float)
 
 
 def _at(poly: Reals, s: NDArray[np.complex128]) -> NDArray[np.complex128]:

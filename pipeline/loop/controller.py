@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from functools import lru_cache
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -13,6 +14,9 @@ if TYPE_CHECKING:
     from pipeline.loop.types import Action, Controller
 
     Polynomial = NDArray[np.float64]
+
+#: Controllers whose polynomials are remembered [1]: a search asks for the same ones many times over.
+_KEPT = 1024
 
 
 def sign(action: Action) -> float:
@@ -62,9 +66,11 @@ def product(p: ArrayLike, q: ArrayLike) -> Polynomial:
     -------
     (n + m - 1,) ndarray
     """
-    return np.asarray(np.polymul(np.asarray(p), np.asarray(q)), dtype=float)
+    out = np.convolve(np.asarray(p, dtype=float), np.asarray(q, dtype=float))
+    return out if out[0] != 0.0 else np.trim_zeros(out, "f") if out.any() else np.zeros(1)
 
 
+@lru_cache(maxsize=_KEPT)
 def feedback_path(controller: Controller) -> tuple[Polynomial, Polynomial]:
     """Give the path from PV to CO as a ratio of polynomials, sign of the feedback left out.
 
@@ -80,9 +86,10 @@ def feedback_path(controller: Controller) -> tuple[Polynomial, Polynomial]:
     num, den = _terms(controller, 1.0, 1.0)
     if controller.pv_filter > 0.0:
         den = product(den, [controller.pv_filter, 1.0])
-    return num, den
+    return _frozen(num), _frozen(den)
 
 
+@lru_cache(maxsize=_KEPT)
 def setpoint_path(controller: Controller) -> tuple[Polynomial, Polynomial]:
     """Give the path from SP to CO as a ratio of polynomials.
 
@@ -95,7 +102,13 @@ def setpoint_path(controller: Controller) -> tuple[Polynomial, Polynomial]:
     numerator, denominator : (n,) ndarray
         Descending powers of s [CO unit / PV unit].
     """
-    return _terms(controller, controller.setpoint_weight, controller.derivative_setpoint_weight)
+    num, den = _terms(controller, controller.setpoint_weight, controller.derivative_setpoint_weight)
+    return _frozen(num), _frozen(den)
+
+
+def _frozen(polynomial: Polynomial) -> Polynomial:
+    polynomial.flags.writeable = False
+    return polynomial
 
 
 def _terms(c: Controller, proportional: float, derivative: float) -> tuple[Polynomial, Polynomial]:
@@ -110,8 +123,9 @@ def _terms(c: Controller, proportional: float, derivative: float) -> tuple[Polyn
     if c.kind in ("PD", "PID") and c.derivative_time > 0.0:
         lag = np.array([c.derivative_filter, 1.0]) if c.derivative_filter > 0.0 else np.array([1.0])
         lead = np.array([k * derivative * c.derivative_time, 0.0])
-        num = np.polyadd(np.polymul(num, lag), np.polymul(lead, den))
-        den = np.polymul(den, lag)
+        num, lead = np.convolve(num, lag), np.convolve(lead, den)
+        num, lead = (np.pad(x, (max(num.size, lead.size) - x.size, 0)) for x in (num, lead))
+        num, den = num + lead, np.convolve(den, lag)
     return num, den
 
 

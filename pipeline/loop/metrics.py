@@ -90,8 +90,9 @@ def _first(t: Reals, y: Reals, level: float) -> float:
 
 def _low_order(forcing: Ratio, loop: Ratio) -> tuple[float, int]:
     """Give F / (1 + L) near s = 0 as value * s**order."""
-    num = np.polymul(forcing[0], loop[1])
-    den = np.polymul(forcing[1], np.polyadd(loop[0], loop[1]))
+    num = np.convolve(forcing[0], loop[1])
+    top, bottom = (np.pad(x, (max(map(len, loop)) - len(x), 0)) for x in loop)
+    den = np.convolve(forcing[1], top + bottom)
     if not np.any(num):
         return 0.0, 0
     i, k = (int(np.argmax(p[::-1] != 0.0)) for p in (num, den))

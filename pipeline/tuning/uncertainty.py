@@ -9,10 +9,8 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from pipeline.findings import Caution
-from pipeline.loop.batch_response import batch_overshoot, batch_setpoint
-from pipeline.loop.controller import feedback_path, product, setpoint_path
+from pipeline.loop.batch_response import batch_final, batch_overshoot, batch_setpoint
 from pipeline.loop.margins import MarginTable, margin_table, margins
-from pipeline.loop.metrics import final_value
 from pipeline.loop.simulate import predict
 from pipeline.loop.stack import stack_loops
 from pipeline.tuning.types import BackedOff, Bands
@@ -68,7 +66,7 @@ def _bands(models: Sequence[ProcessModel], controller: Controller, table: Margin
         settled = nominal.settling_time if np.isfinite(nominal.settling_time) else end
         horizon = min(_HORIZON * settled, 2.0 * end)
         t, pv = batch_setpoint(kept, [controller], horizon=horizon, points=_POINTS)
-        over[stable] = batch_overshoot(pv, np.array([_final(g, controller) for g in kept]))
+        over[stable] = batch_overshoot(pv, batch_final(kept, controller))
         low, high = np.percentile(pv, [_PERCENTILES[0], _PERCENTILES[2]], axis=0)
     else:
         t = low = high = np.zeros(0)
@@ -82,12 +80,6 @@ def _bands(models: Sequence[ProcessModel], controller: Controller, table: Margin
         low=_frozen(low),
         high=_frozen(high),
     )
-
-
-def _final(model: ProcessModel, controller: Controller) -> float:
-    num, den = model.numerator, model.denominator
-    sp, fb = setpoint_path(controller), feedback_path(controller)
-    return final_value((product(sp[0], num), product(sp[1], den)), (product(fb[0], num), product(fb[1], den)))
 
 
 def _frozen(x: Reals) -> Reals:
