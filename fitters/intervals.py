@@ -6,8 +6,9 @@ from dataclasses import replace
 from typing import TYPE_CHECKING
 
 import numpy as np
-from scipy.special import stdtrit
+from scipy.special import chdtri, ndtri, stdtrit
 
+from fitters.even import evenly
 from fitters.fit import Fit, Parameter, frozen
 from fitters.noise import covariance, whitened_covariance
 from fitters.profile import ends_of
@@ -307,9 +308,9 @@ def _drawer(
         scaled = finite * np.outer(scale, scale)
         weights, vectors = np.linalg.eigh(scaled)
         root = vectors * np.sqrt(np.maximum(weights, 0.0))
-        rng = np.random.default_rng(seed)
-        normal = rng.standard_normal((count, root.shape[1]))
-        stretch = np.sqrt(degrees / rng.chisquare(degrees, count))
+        even = evenly(count, root.shape[1] + 1, seed)
+        normal = ndtri(even[:, 1:])
+        stretch = np.sqrt(degrees / chdtri(degrees, even[:, 0]))
         moved = (normal @ root.T) * stretch[:, None]
         searches = estimate.search + np.clip(moved[:, :k], -12.0, 12.0)
         dead_times = np.maximum(estimate.dead_time + moved[:, k], 0.0)

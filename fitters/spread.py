@@ -13,6 +13,8 @@ from typing import TYPE_CHECKING
 import numpy as np
 from scipy.special import stdtrit
 
+from fitters.even import normally
+
 if TYPE_CHECKING:
     from fitters.fit import Choice, Fit
     from fitters.process import ProcessModel
@@ -80,9 +82,8 @@ def plausible(choice: Choice, floor: Floor, count: int, seed: int) -> dict[str, 
     best = choice.best
     drawn = best.draw(count, seed)
     out = {"noise in the log": drawn}
-    rng = np.random.default_rng(seed + 1)
     if choice.gain_scatter is not None:
-        out["scatter between moves"] = _spread(drawn, rng, Floor(gain=_missing(best, choice.gain_scatter)))
+        out["scatter between moves"] = _spread(drawn, seed + 1, Floor(gain=_missing(best, choice.gain_scatter)))
     believed = [choice.candidates[0]]
     believed += [c for c in choice.candidates[1:] if c.weight >= _BELIEVED and _determined(c.fit)]
     if len(believed) > 1:
@@ -94,7 +95,7 @@ def plausible(choice: Choice, floor: Floor, count: int, seed: int) -> dict[str, 
         out["choice of structure"] = tuple(mixed[:count])
     if floor != Floor():
         centre = (best.model,) * count
-        out["stated floor"] = _spread(centre, rng, floor)
+        out["stated floor"] = _spread(centre, seed + 1, floor)
     return out
 
 
@@ -111,8 +112,6 @@ def _missing(fit: Fit, scatter: float) -> float:
     return float(np.sqrt(max(scatter**2 - own**2, 0.0))) if np.isfinite(own) else 0.0
 
 
-def _spread(
-    models: tuple[ProcessModel, ...], rng: np.random.Generator, by: Floor
-) -> tuple[ProcessModel, ...]:
-    factors = np.exp(rng.standard_normal((len(models), 3)) * [by.gain, by.lags, by.dead_time])
+def _spread(models: tuple[ProcessModel, ...], seed: int, by: Floor) -> tuple[ProcessModel, ...]:
+    factors = np.exp(normally(len(models), 3, seed) * [by.gain, by.lags, by.dead_time])
     return tuple(m.scaled(*row) for m, row in zip(models, factors.tolist(), strict=True))

@@ -29,7 +29,7 @@ def batch_setpoint(
     models: Sequence[ProcessModel],
     controllers: Sequence[Controller],
     *,
-    horizon: float,
+    horizon: float | Reals,
     points: int = 512,
 ) -> tuple[Reals, Reals]:
     """Give unit set-point responses of stable loops.
@@ -40,15 +40,15 @@ def batch_setpoint(
         All of one degree of numerator and denominator.
     controllers : sequence of Controller
         All of one kind; either sequence may hold one item, which then serves every row.
-    horizon : float
-        Length of the responses [s].
+    horizon : float or (m,) ndarray
+        Length of the responses, or of each [s].
     points : int
         Points of the grid.
 
     Returns
     -------
-    t : (points,) ndarray
-        Grid from zero [s].
+    t : (points,) or (m, points) ndarray
+        Grid from zero, or one for each row [s].
     pv : (m, points) ndarray
         Responses [1]. Rows of unstable loops mean nothing.
 
@@ -67,7 +67,8 @@ def batch_setpoint(
     g_num, g_den = _stacked([g.numerator for g in models]), _stacked([g.denominator for g in models])
     delay = np.array([g.dead_time for g in models]) + np.array([extra_dead_time(c) for c in controllers])
     m = delay.size
-    period = 2.0 * horizon
+    length = np.atleast_1d(np.asarray(horizon, dtype=float))[:, None]
+    period = 2.0 * length
     count = 2 * points
     a = _DAMPING / period
     s = np.asarray(a + 2j * np.pi / period * np.arange(points + 1), dtype=complex)
@@ -79,7 +80,7 @@ def batch_setpoint(
     t = period / count * np.arange(count)
     first, second, order = _leading(sp_num, sp_den, g_num, g_den)
     known = np.zeros((m, count))
-    since = t[None, :] - delay[:, None]
+    since = t - delay[:, None]
     stepped, cornered = order == 0, (order == 1) | (order == 2)
     if stepped.any():
         direct, _, loop_order = _leading(fb_num, fb_den, g_num, g_den)
@@ -88,16 +89,20 @@ def batch_setpoint(
         known += np.where(stepped[:, None], _stairs(first, direct, delay, np.asarray(t, dtype=float)), 0.0)
     if cornered.any():
         power = np.where(cornered, order, 1)
-        speed = np.where(-second / power > 0.0, -second / power, 10.0 / horizon)
+        speed = np.where(-second / power > 0.0, -second / power, 10.0 / length[:, 0])
         part = first[:, None] * late / (s * (s + speed[:, None]) ** power[:, None])
         y = y - np.where(cornered[:, None], part, 0.0)
-        shape = gammainc(power[:, None].astype(float), speed[:, None] * np.maximum(since, 0.0))
+        # As the series has it: with its own echo from one period on, which may be no small part.
+        order_of = power[:, None].astype(float)
+        shape = gammainc(order_of, speed[:, None] * np.maximum(since, 0.0))
+        shape += np.exp(-_DAMPING) * gammainc(order_of, speed[:, None] * np.maximum(since + period, 0.0))
         known += np.where(cornered[:, None], (first / speed**power)[:, None] * shape, 0.0)
     # The last coefficient stands for both ends of the band.
     y[:, -1] *= 0.5
     response = np.fft.irfft(y, n=count, axis=1) * (count / period) * np.exp(a * t) + known
     response[since < 0.0] = 0.0
-    return np.asarray(t[:points], dtype=float), np.asarray(response[:, :points], dtype=float)
+    grid = np.asarray(t[:, :points], dtype=float)
+    return grid[0] if np.ndim(horizon) == 0 else grid, np.asarray(response[:, :points], dtype=float)
 
 
 def _stacked(polys: Sequence[Sequence[float] | Reals]) -> Reals:
@@ -110,32 +115,36 @@ def _stacked(polys: Sequence[Sequence[float] | Reals]) -> Reals:
     return out
 
 
-def batch_final(models: Sequence[ProcessModel], controller: Controller) -> Reals:
+def batch_final(models: Sequence[ProcessModel], controllers: Sequence[Controller]) -> Reals:
     """Give where each loop's unit set-point step ends.
 
     Parameters
     ----------
     models : sequence of ProcessModel
         All of one number of integrators; their loops stable.
-    controller : Controller
+    controllers : sequence of Controller
+        All of one kind; either sequence may hold one item, which then serves every row.
 
     Returns
     -------
     (m,) ndarray
         Final values [1]: one with integral action in the controller.
     """
-    if np.isfinite(controller.integral_time) and controller.kind in ("I", "PI", "PID"):
-        return np.ones(len(models))
+    weight = np.array([c.setpoint_weight for c in controllers])
+    every = np.ones(max(len(models), len(controllers)))
+    c = controllers[0]
+    if c.kind in ("I", "PI", "PID") and np.isfinite(c.integral_time):
+        return every
     if models[0].integrators:
-        return np.full(len(models), controller.setpoint_weight)
-    loop = sign(controller.action) * controller.gain * np.array([g.gain for g in models])
-    return np.asarray(controller.setpoint_weight * loop / (1.0 + loop), dtype=float)
+        return weight * every
+    loop = np.array([sign(c.action) * c.gain for c in controllers]) * np.array([g.gain for g in models])
+    return np.asarray(weight * loop / (1.0 + loop), dtype=float)
 
 
 def _at(poly: Reals, s: NDArray[np.complex128]) -> NDArray[np.complex128]:
     if np.all(poly == poly[:1]):
         poly = poly[:1]
-    out = np.repeat(poly[:, :1].astype(complex), s.size, axis=1)
+    out = np.broadcast_to(poly[:, :1], np.broadcast_shapes(poly[:, :1].shape, s.shape)).astype(complex)
     for k in range(1, poly.shape[1]):
         out = out * s + poly[:, k : k + 1]
     return out

@@ -10,7 +10,16 @@ import numpy as np
 
 from pipeline.loop.search import minima
 from pipeline.loop.stack import LoopStack, stack_loops
-from pipeline.loop.sweep import Crossings, Sweep, gain_crossings, phase_crossings, sweep, unstable_roots
+from pipeline.loop.sweep import (
+    Crossings,
+    Grid,
+    Sweep,
+    frequency_grid,
+    gain_crossings,
+    phase_crossings,
+    sweep,
+    unstable_roots,
+)
 from pipeline.loop.types import Crossing, Margins
 
 if TYPE_CHECKING:
@@ -21,9 +30,9 @@ if TYPE_CHECKING:
 
     Reals = NDArray[np.float64]
 
-#: Grid of one loop and of a batch: points a decade [1], and |L| down to which the dead time is followed [1].
-_FINE = (80, 0.02)
-_COARSE = (40, 0.15)
+#: Grids of one loop and of a batch, whose crossings and peaks lie near the loops' own frequencies.
+_FINE = Grid(per_decade=80, floor=0.02)
+_COARSE = Grid(per_decade=24, floor=0.15, reach=1e2)
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -66,7 +75,7 @@ def margins(model: ProcessModel, controller: Controller) -> Margins:
 
 def margins_of(loops: LoopStack) -> Margins:
     """Give every margin of a one-row stack; see `margins`."""
-    s = sweep(loops, per_decade=_FINE[0], floor=_FINE[1])
+    s = sweep(loops, frequency_grid(loops, _FINE))
     gains, phases = gain_crossings(s), phase_crossings(s)
     listed = _list(gains, phases)
     if unstable_roots(s)[0] > 0.5:
@@ -136,7 +145,7 @@ def margin_table(loops: LoopStack, *, sensitivity: bool = True) -> MarginTable:
     -------
     MarginTable
     """
-    s = sweep(loops, per_decade=_COARSE[0], floor=_COARSE[1])
+    s = sweep(loops, frequency_grid(loops, _COARSE))
     stable = unstable_roots(s) < 0.5
     gains, phases = gain_crossings(s), phase_crossings(s)
     pm = np.full(len(loops), np.inf)

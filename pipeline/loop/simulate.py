@@ -13,7 +13,7 @@ from pipeline.loop.controller import extra_dead_time, feedback_path, product, se
 from pipeline.loop.metrics import final_value, integral_value, measure, noise_gain
 from pipeline.loop.stack import stack_loops
 from pipeline.loop.stepping import Recursion, closed_loop, spectral_radius
-from pipeline.loop.sweep import frequency_grid
+from pipeline.loop.sweep import Grid, frequency_grid
 from pipeline.loop.types import Prediction, Trajectory
 
 if TYPE_CHECKING:
@@ -25,6 +25,8 @@ if TYPE_CHECKING:
     Reals = NDArray[np.float64]
     Ratio = tuple[Reals, Reals]
 
+#: Where feedback is felt is read off this grid.
+_GRID = Grid(per_decade=20, floor=1.0)
 #: Grid interval times the highest frequency at which the feedback is felt [rad]: the
 #: interpolation error goes as its square over twelve, 1e-4.
 _FINENESS = 0.035
@@ -85,7 +87,7 @@ def _plan(model: ProcessModel, controller: Controller) -> _Plan:
     loops = stack_loops([model], [controller])
     loop = _ratio(model, feedback_path(controller))
     delay = float(loops.delay[0])
-    omega = frequency_grid(loops, per_decade=20, floor=1.0)
+    omega = frequency_grid(loops, _GRID)
     top, bottom = loops.parts(omega)
     felt = np.flatnonzero(np.abs(top) > _FELT * np.abs(bottom))
     if felt.size == 0:

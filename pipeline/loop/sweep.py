@@ -21,7 +21,7 @@ if TYPE_CHECKING:
 #: so a crossing is never stepped over and a winding never aliased.
 _TURN = 0.35
 #: Turn of the dead time that is followed whatever the gain [rad]: four turns.
-_ALWAYS = 8.0 * np.pi
+ALWAYS_FOLLOWED = 8.0 * np.pi
 #: Most grid points spent on resolving the dead time [1].
 _MOST_LINEAR = 6000
 #: Rows whose poles and zeros set a shared grid [1]; the others of one structure lie among them.
@@ -64,17 +64,34 @@ class Sweep:
     resolved: NDArray[np.bool_]
 
 
-def frequency_grid(loops: LoopStack, *, per_decade: int, floor: float) -> Reals:
-    """Build a grid on the loops' own scale.
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Grid:
+    """How fine a frequency grid is.
 
-    Parameters
+    Attributes
     ----------
-    loops : LoopStack
     per_decade : int
         Points a decade of the logarithmic part.
     floor : float
         The dead time is resolved up to the last frequency where |L| exceeds this [1], and
         always through its first four turns.
+    reach : float
+        How far the grid goes below the lowest and above the highest of the loops' own
+        frequencies [1].
+    """
+
+    per_decade: int
+    floor: float
+    reach: float = 1e3
+
+
+def frequency_grid(loops: LoopStack, grid: Grid) -> Reals:
+    """Build a grid on the loops' own scale.
+
+    Parameters
+    ----------
+    loops : LoopStack
+    grid : Grid
 
     Returns
     -------
@@ -112,16 +129,16 @@ def frequency_grid(loops: LoopStack, *, per_decade: int, floor: float) -> Reals:
     scale = scale[np.isfinite(scale) & (scale > 0.0)]
     if scale.size == 0:
         scale = np.ones(1)
-    low, high = scale.min() * 1e-3, scale.max() * 1e3
-    omega = np.geomspace(low, high, int(np.log10(high / low) * per_decade) + 2)
+    low, high = scale.min() / grid.reach, scale.max() * grid.reach
+    omega = np.geomspace(low, high, int(np.log10(high / low) * grid.per_decade) + 2)
     if dense:
         near = np.concatenate(dense)
         omega = np.union1d(omega, near[(near > low) & (near < high)])
     if delay > 0.0:
         bare = np.abs(_bare(loops, pick, omega)).max(axis=0)
-        audible = np.flatnonzero(bare > floor)
+        audible = np.flatnonzero(bare > grid.floor)
         shortest = float(loops.delay[loops.delay > 0.0].min())
-        top = max(omega[audible[-1]] if audible.size else 0.0, _ALWAYS / shortest)
+        top = max(omega[audible[-1]] if audible.size else 0.0, ALWAYS_FOLLOWED / shortest)
         start = _TURN / delay
         count = int(min((top - start) * delay / _TURN, _MOST_LINEAR))
         if count > 1:
@@ -150,23 +167,19 @@ def _asymptotes(num: Reals, den: Reals) -> Reals:
     return np.array(out)
 
 
-def sweep(loops: LoopStack, *, per_decade: int, floor: float, omega: Reals | None = None) -> Sweep:
+def sweep(loops: LoopStack, omega: Reals) -> Sweep:
     """Evaluate loops on a shared grid.
 
     Parameters
     ----------
     loops : LoopStack
-    per_decade, floor
-        As in `frequency_grid`.
-    omega : (n,) ndarray, optional
-        A grid built before.
+    omega : (n,) ndarray
+        Rising frequencies [rad/s], as from `frequency_grid`.
 
     Returns
     -------
     Sweep
     """
-    if omega is None:
-        omega = frequency_grid(loops, per_decade=per_decade, floor=floor)
     top, bottom = loops.parts(omega)
     with np.errstate(divide="ignore"):
         log_gain = np.log(np.abs(top)) - np.log(np.abs(bottom))

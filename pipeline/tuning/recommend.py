@@ -22,8 +22,8 @@ if TYPE_CHECKING:
     from pipeline.settings import LoopSheet
     from pipeline.tuning.types import BackedOff, Tuning
 
-#: Processes drawn from the fit's uncertainty; percentiles then scatter by about a percent.
-PLAUSIBLE = 500
+#: Processes drawn from each source of doubt: a power of two, which spreads them most evenly.
+PLAUSIBLE = 512
 #: Fixed, so that one log gives one record.
 _SEED = 20_261_201
 #: Share of a log interval by which a dead time may be missed at both ends: held CO, sampled PV [1].

@@ -2,17 +2,18 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import replace
 from typing import TYPE_CHECKING
 
 import numpy as np
 
 from pipeline.findings import Caution
-from pipeline.loop.simulate import overshoot
+from pipeline.loop.simulate import overshoot, predict
 
 if TYPE_CHECKING:
     from fitters.process import ProcessModel
-    from pipeline.loop.types import Controller
+    from pipeline.loop.types import Controller, Margins
     from pipeline.tuning.types import Criteria
 
 #: Said where a PID is better off as a PI.
@@ -23,47 +24,85 @@ NO_DERIVATIVE = Caution(
 )
 
 
-def unreached(model: ProcessModel, kind: str, criteria: Criteria, pm: float, gm: float, ms: float) -> Caution:
+def no_gain_limit(assumed: float) -> Caution:
+    """Say that nothing limits the gain on this model.
+
+    Parameters
+    ----------
+    assumed : float
+        Dead time taken in its place [s].
+    """
+    return Caution(
+        code="no-gain-limit",
+        level="stop",
+        value=0.0,
+        limit=assumed,
+        text=f"On this model no criterion ever limits the gain, which no real loop allows. The settings "
+        f"assume a dead time of {assumed:.3g} s; give the scan, the filter or a dead time to count on.",
+    )
+
+
+def no_stabilising_gain(kind: str) -> Caution:
+    """Say that no gain of this kind of controller closes a stable loop.
+
+    Parameters
+    ----------
+    kind : str
+    """
+    return Caution(
+        code="no-stabilising-gain",
+        level="stop",
+        value=None,
+        limit=None,
+        text=f"No gain of a {kind} controller makes this loop stable. Choose another kind.",
+    )
+
+
+def unreached(criteria: Criteria, reached: Margins, cures: Sequence[str]) -> Caution:
     """Say what was reached where no settings keep every criterion, and what would.
 
     Parameters
     ----------
-    model : ProcessModel
-    kind : str
-        Kind of controller.
     criteria : Criteria
-    pm, gm, ms : float
-        Margins reached [degrees, 1, 1].
+    reached : Margins
+    cures : sequence of str
+        What would reach the criteria.
     """
-    if model.unstable_poles.size:
-        cure = "The process runs away by itself: less dead time, or derivative action, would raise it."
-    elif model.integrators >= 2 and kind in ("P", "I", "PI"):
-        cure = "A process that integrates twice needs derivative action."
-    elif kind == "I" and model.integrators:
-        cure = "A process that integrates needs proportional action."
-    else:
-        cure = "Less dead time, another kind of controller, or a lower target would reach it."
-    asked = criteria.phase_margin
+    cure = (
+        f"What would reach them: {', or '.join(cures)}." if cures else "Only lower targets would be reached."
+    )
     return Caution(
         code="target-not-reached",
         level="care",
-        value=pm,
-        limit=asked,
+        value=reached.phase_margin,
+        limit=criteria.phase_margin,
         text=f"No settings of this controller keep every criterion. The best found reach a phase margin of "
-        f"{pm:.1f} degrees, gain margin {gm:.2f}, Ms {ms:.2f}. {cure}",
+        f"{reached.phase_margin:.1f} degrees, gain margin {reached.gain_margin:.2f}, "
+        f"Ms {reached.max_sensitivity:.2f}. {cure}",
     )
 
 
-def overshoot_above(model: ProcessModel, controller: Controller, limit: float) -> Caution:
-    """Say that no gain within the margins keeps the overshoot.
+def simulated_above(model: ProcessModel, controller: Controller, criteria: Criteria, by: str) -> Caution:
+    """Say that no gain within the margins keeps the overshoot, or the output's peak.
 
     Parameters
     ----------
     model : ProcessModel
     controller : Controller
-    limit : float
-        [%].
+    criteria : Criteria
+    by : {"overshoot", "co_peak"}
+        The criterion not kept.
     """
+    if by == "co_peak":
+        peak = predict(model, controller).co_peak
+        return Caution(
+            code="co-peak-not-reached",
+            level="care",
+            value=peak,
+            limit=criteria.co_peak,
+            text=f"No gain within the margins keeps the output's move at {criteria.co_peak:.3g} for each PV unit "
+            f"of a set-point step; here it is {peak:.3g}. A lower set-point weight would lower it.",
+        )
     value = overshoot(model, controller)
     softer = overshoot(model, replace(controller, setpoint_weight=0.0))
     cure = (
@@ -77,8 +116,9 @@ def overshoot_above(model: ProcessModel, controller: Controller, limit: float) -
         code="overshoot-not-reached",
         level="care",
         value=value,
-        limit=limit,
-        text=f"No gain within the margins keeps the overshoot at {limit:.3g} %; here it is {value:.1f} %.{cure}",
+        limit=criteria.overshoot,
+        text=f"No gain within the margins keeps the overshoot at {criteria.overshoot:.3g} %; here it is "
+        f"{value:.1f} %.{cure}",
     )
 
 

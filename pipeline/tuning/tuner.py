@@ -1,8 +1,8 @@
-"""The largest integral gain that keeps every criterion on the nominal model."""
+"""Find the settings: the largest integral gain (without integral action, gain) that keeps every criterion."""
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -10,55 +10,31 @@ import numpy as np
 from pipeline.findings import Caution
 from pipeline.loop.forms import action_for_model
 from pipeline.loop.margins import margins
-from pipeline.loop.simulate import overshoot, predict
-from pipeline.loop.stack import stack_loops
+from pipeline.loop.simulate import predict
 from pipeline.loop.types import Controller
 from pipeline.tuning import remarks as remark
-from pipeline.tuning.criteria import NAMES, GainRange, gain_range
-from pipeline.tuning.overshoot import OVERSHOOT_TOLERANCE, gain_for_overshoot
+from pipeline.tuning.criteria import NAMES
+from pipeline.tuning.search import Job, Shape, eased, ends, fastest, largest_share, time_scales
+from pipeline.tuning.simulated import TOLERANCE, excess, fastest_within, gain_within, simulated
 from pipeline.tuning.types import Criteria, Tuning
 
 if TYPE_CHECKING:
-    from numpy.typing import NDArray
-
     from fitters.process import ProcessModel
     from pipeline.loop.types import Kind
 
-    Reals = NDArray[np.float64]
-
-#: Grids of the search and of the final answer.
-_SEARCH_GRID = (24, np.inf)
-_FINAL_GRID = (80, 0.02)
-#: A derivative time above a quarter of the integral time has no series equation, so no
-#: controller of that kind could be set to it.
-MOST_DERIVATIVE = 0.25
 #: Stand-in dead time where nothing limits the gain [share of the fastest lag]: less than
 #: this a bump test does not show.
 _UNSEEN = 0.1
-
-
-@dataclass(frozen=True, kw_only=True)
-class _Job:
-    """One tuning: model with the dead-time floor, controller pattern, what may be varied."""
-
-    model: ProcessModel
-    pattern: Controller
-    ratio: float
-    scales: Reals
-
-    def shape(self, integral: float, derivative: float, gain: float = 1.0) -> Controller:
-        """Give the controller with these times and this gain."""
-        return replace(
-            self.pattern,
-            gain=gain,
-            integral_time=integral,
-            derivative_time=derivative,
-            derivative_filter=derivative / self.ratio,
-        )
-
-    def speed(self, high: Reals, integral: Reals) -> Reals:
-        """Give what is maximised: integral gain, or gain without integral action."""
-        return high / integral if self.pattern.kind in ("PI", "PID") else high
+#: Shares of the dead time at which an unreached target is tried again [1].
+_LESS_DEAD_TIME = (0.8, 0.6, 0.4, 0.25, 0.1)
+#: Kinds of controller with more to give than each kind [1].
+_RICHER: dict[str, tuple[Kind, ...]] = {
+    "P": ("PI", "PD"),
+    "I": ("PI",),
+    "PI": ("PID",),
+    "PD": ("PID",),
+    "PID": (),
+}
 
 
 def tune(
@@ -113,82 +89,41 @@ def tune(
         scan=scan,
         compute_delay=compute_delay,
     )
-    found = _tuned(held, pattern, criteria, derivative_filter_ratio)
-    if kind != "PID":
-        return found
-    # A derivative time of nothing is a PID's to choose: it must not end below the PI.
-    plain = _tuned(held, replace(pattern, kind="PI"), criteria, derivative_filter_ratio)
-    if plain.reached and (not found.reached or _integral_gain(plain) > _integral_gain(found)):
-        return replace(
-            plain,
-            controller=replace(plain.controller, kind="PID"),
-            remarks=(*plain.remarks, remark.NO_DERIVATIVE),
-        )
-    return found
+    job = Job(model=held, pattern=pattern, ratio=derivative_filter_ratio, scales=time_scales(held, pattern))
+    return _tuned(job, criteria)
 
 
-def _integral_gain(tuning: Tuning) -> float:
-    return tuning.controller.gain / tuning.controller.integral_time
-
-
-def _tuned(held: ProcessModel, pattern: Controller, criteria: Criteria, ratio: float) -> Tuning:
-    """Tune one kind of controller on one model."""
+def _tuned(job: Job, criteria: Criteria) -> Tuning:
     remarks: list[Caution] = []
-    job = _Job(model=held, pattern=pattern, ratio=ratio, scales=_time_scales(held, pattern))
-    best = _search(job, criteria)
-    if best is not None and not np.isfinite(best[2]):
-        assumed = _UNSEEN * float(job.scales.min())
-        remarks.append(
-            Caution(
-                code="no-gain-limit",
-                level="stop",
-                value=0.0,
-                limit=assumed,
-                text=f"On this model no criterion ever limits the gain, which no real loop allows. The settings "
-                f"assume a dead time of {assumed:.3g} s; give the scan, the filter or a dead time to count on.",
-            )
-        )
-        job = replace(job, model=replace(held, dead_time=assumed))
-        best = _search(job, criteria)
+    best = fastest(job, criteria)
+    if best is not None and not np.isfinite(best.gain):
+        job, assumed = _with_assumed_dead_time(job)
+        remarks.append(remark.no_gain_limit(assumed))
+        best = fastest(job, criteria)
     reached, asked = best is not None, criteria
-    share = 1.0
     if best is None:
-        share, best = _best_share(job, criteria)
+        share, best = largest_share(job, criteria)
         if best is None:
             return _without_settings(job, remarks)
-        asked = _eased(criteria, share)
-    assert best is not None
-    integral, derivative, _ = best
-    controller = job.shape(integral, derivative, best[2])
-    ends = _ends(job, controller, asked)
-    low, by = float(ends.low[0]), int(ends.high_by[0])
-    if np.isfinite(ends.high[0]):
-        controller = replace(controller, gain=float(ends.high[0]))
-    # Otherwise the coarse and the fine grid differ about a gap of no width: stay in the coarse one.
-    binding = NAMES[by] if by >= 0 else "phase_margin"
-    if criteria.overshoot is not None and reached:
-        limited = _limit_overshoot(job, criteria, controller, low)
-        if limited is None:
-            reached = False
-            remarks.append(remark.overshoot_above(job.model, controller, criteria.overshoot))
-        elif limited is not controller:
-            controller, binding = limited, "overshoot"
-            ends = _ends(job, controller, asked)
-            low = float(ends.low[0])
-            if abs(float(ends.high[0]) / controller.gain - 1.0) < 1e-6 and ends.high_by[0] >= 0:
-                # A longer integral time brought the overshoot down; there a margin binds again.
-                binding = NAMES[int(ends.high_by[0])]
-    elif criteria.overshoot is not None and overshoot(job.model, controller) > criteria.overshoot:
-        remarks.append(remark.overshoot_above(job.model, controller, criteria.overshoot))
+        asked = eased(criteria, share)
+    controller, low, low_by, binding = _exact(job, best, asked)
+    if simulated(criteria):
+        over = excess(job.model, controller, criteria)
+        within = None
+        if reached and over.value > TOLERANCE:
+            within = _within_simulated(job, criteria, controller, low)
+            reached = within is not None
+        if within is not None:
+            controller, low, low_by, binding = within
+        elif over.value > TOLERANCE:
+            remarks.append(remark.simulated_above(job.model, controller, criteria, over.by))
     m = margins(job.model, controller)
-    if share < 1.0:
-        remarks.append(
-            remark.unreached(
-                job.model, job.pattern.kind, criteria, m.phase_margin, m.gain_margin, m.max_sensitivity
-            )
-        )
+    if asked is not criteria:
+        remarks.append(remark.unreached(criteria, m, cures(job, criteria)))
+    if job.pattern.kind == "PID" and controller.derivative_time == 0.0:
+        remarks.append(remark.NO_DERIVATIVE)
     if np.isfinite(low) and low > 0.0:
-        remarks.append(remark.lower_end(low, int(ends.low_by[0]), controller.gain))
+        remarks.append(remark.lower_end(low, low_by, controller.gain))
     return Tuning(
         model=job.model,
         controller=controller,
@@ -196,181 +131,80 @@ def _tuned(held: ProcessModel, pattern: Controller, criteria: Criteria, ratio: f
         prediction=predict(job.model, controller),
         binding=binding,
         reached=reached,
+        lowest_gain=low if np.isfinite(low) else 0.0,
         remarks=tuple(remarks),
     )
 
 
-def _time_scales(model: ProcessModel, pattern: Controller) -> Reals:
-    """Give the loop's own times: lags, zeros, dead time, filters [s]."""
-    roots = np.abs(np.concatenate([model.poles, model.zeros]))
-    late = [model.dead_time + 0.5 * pattern.scan + pattern.compute_delay, pattern.pv_filter]
-    scales = np.concatenate([1.0 / roots[roots > 0.0], [x for x in late if x > 0.0]])
-    if scales.size:
-        return scales
-    return np.array([1.0 / abs(model.gain) if model.integrators and model.gain else 1.0])
+def _with_assumed_dead_time(job: Job) -> tuple[Job, float]:
+    assumed = _UNSEEN * float(job.scales.min())
+    return replace(job, model=replace(job.model, dead_time=assumed)), assumed
 
 
-def _evaluate(job: _Job, criteria: Criteria, integral: Reals, derivative: Reals) -> GainRange:
-    shapes = [job.shape(float(i), float(d)) for i, d in zip(integral, derivative, strict=True)]
-    return gain_range(
-        stack_loops([job.model], shapes), criteria, per_decade=_SEARCH_GRID[0], floor=_SEARCH_GRID[1]
-    )
+def _exact(job: Job, best: Shape, criteria: Criteria) -> tuple[Controller, float, int, str]:
+    """Refine the gain of one shape; give the controller, the range's lower end and what sets each end."""
+    controller = job.shape(best.integral, best.derivative, best.gain)
+    r = ends(job, controller, criteria)
+    by = int(r.high_by[0])
+    # Where the coarse and the fine grid differ about a gap of no width, the coarse one stands.
+    if np.isfinite(r.high[0]):
+        controller = replace(controller, gain=float(r.high[0]))
+    return controller, float(r.low[0]), int(r.low_by[0]), NAMES[by] if by >= 0 else NAMES[0]
 
 
-def _ends(job: _Job, near: Controller, criteria: Criteria) -> GainRange:
-    """Give the exact range of gains for one shape, on a grid that suits a gain near the answer."""
-    r = gain_range(
-        stack_loops([job.model], [near]),
-        criteria,
-        exact=True,
-        per_decade=_FINAL_GRID[0],
-        floor=_FINAL_GRID[1],
-    )
-    return replace(r, low=r.low * near.gain, high=r.high * near.gain)
-
-
-def _search(job: _Job, criteria: Criteria) -> tuple[float, float, float] | None:
-    """Search integral and derivative time for the largest speed: a coarse grid, then closer ones."""
-    kind = job.pattern.kind
-    if kind in ("P", "I"):
-        one = np.array([1.0 if kind == "I" else np.inf])
-        r = _evaluate(job, criteria, one, np.zeros(1))
-        return None if np.isnan(r.high[0]) else (float(one[0]), 0.0, float(r.high[0]))
-    low, high = 0.1 * float(job.scales.min()), 60.0 * float(job.scales.sum())
-    shares = np.array([0.0])
-    if kind == "PID":
-        shares = np.array([0.03, 0.08, 0.14, 0.2, MOST_DERIVATIVE])
-    count = {"PI": 36, "PD": 36, "PID": 20}[kind]
-    times = np.geomspace(low, high, count)
-    log_step = float(np.log(times[1] / times[0]))
-    grid_t, grid_s = (g.ravel() for g in np.meshgrid(times, shares, indexing="ij"))
-    best = _pick(job, criteria, grid_t, grid_s)
-    span_s = 0.06
-    for _ in range(3):
-        if best is None or not np.isfinite(best[2]):
-            return None if best is None else _as_times(job, best)
-        t = best[0] * np.exp(np.linspace(-log_step, log_step, 11 if kind != "PID" else 7))
-        s = np.array([best[1]])
-        if kind == "PID":
-            s = np.unique(np.clip(best[1] + np.linspace(-span_s, span_s, 5), 0.005, MOST_DERIVATIVE))
-        grid_t, grid_s = (g.ravel() for g in np.meshgrid(t, s, indexing="ij"))
-        closer = _pick(job, criteria, grid_t, grid_s)
-        best = closer if closer is not None else best
-        log_step, span_s = log_step / 4.0, span_s / 2.0
-    return None if best is None else _as_times(job, best)
-
-
-def _pick(job: _Job, criteria: Criteria, times: Reals, shares: Reals) -> tuple[float, float, float] | None:
-    if job.pattern.kind == "PD":
-        integral, derivative = np.full(times.size, np.inf), times
-    else:
-        integral, derivative = times, shares * times
-    r = _evaluate(job, criteria, integral, derivative)
-    if np.all(np.isnan(r.high)):
+def _within_simulated(
+    job: Job, criteria: Criteria, start: Controller, low: float
+) -> tuple[Controller, float, int, str] | None:
+    """Give the fastest settings that also keep overshoot and CO peak, or None."""
+    if not job.integrates:
+        found = gain_within(job.model, start, low, criteria)
+        return None if found is None else (found[0], low, -1, found[1])
+    shape = fastest_within(job, criteria, start)
+    if shape is None:
         return None
-    k = int(np.nanargmax(job.speed(r.high, integral)))
-    return float(times[k]), float(shares[k]), float(r.high[k])
-
-
-def _as_times(job: _Job, best: tuple[float, float, float]) -> tuple[float, float, float]:
-    if job.pattern.kind == "PD":
-        return np.inf, best[0], best[2]
-    return best[0], best[1] * best[0], best[2]
-
-
-def _eased(criteria: Criteria, share: float) -> Criteria:
-    """Ask for only a share of every margin: angle, gain margin beyond one, distance 1/Ms."""
-    pm, gm, ms = criteria.phase_margin, criteria.gain_margin, criteria.max_sensitivity
-    return replace(
-        criteria,
-        phase_margin=None if pm is None else pm * share,
-        gain_margin=None if gm is None else gm**share,
-        max_sensitivity=None if ms is None else 1.0 / (share * (1.0 / ms)),
-    )
-
-
-def _best_share(job: _Job, criteria: Criteria) -> tuple[float, tuple[float, float, float] | None]:
-    """Bisect the largest share of all criteria that some settings keep."""
-    low, high, best = 0.0, 1.0, None
-    for _ in range(14):
-        middle = 0.5 * (low + high)
-        found = _search(job, _eased(criteria, middle))
-        if found is None:
-            high = middle
-        else:
-            low, best = middle, found
-    if best is None:
-        return low, best
-    # The search's coarse grid closes a gap a little early: press on with the exact one.
-    high = min(1.0, low * 1.01)
-    for _ in range(10):
-        middle = 0.5 * (low + high)
-        ends = _ends(job, job.shape(*best), _eased(criteria, middle))
-        if np.isfinite(ends.high[0]):
-            low, best = middle, (best[0], best[1], float(ends.high[0]))
-        else:
-            high = middle
-    return low, best
-
-
-def _limit_overshoot(job: _Job, criteria: Criteria, start: Controller, low: float) -> Controller | None:
-    """Give the fastest settings that also keep the overshoot; `start` itself if it does."""
-    limit = criteria.overshoot
-    assert limit is not None
-    if overshoot(job.model, start) <= limit + OVERSHOOT_TOLERANCE:
-        return start
-    if job.pattern.kind not in ("PI", "PID"):
-        return gain_for_overshoot(job.model, start, low, limit)
-    share = start.derivative_time / start.integral_time
-
-    def fastest(log_time: float) -> tuple[float, Controller | None]:
-        time = float(np.exp(log_time))
-        r = gain_range(
-            stack_loops([job.model], [job.shape(time, share * time)]),
-            criteria,
-            per_decade=_SEARCH_GRID[0],
-            floor=_SEARCH_GRID[1],
-        )
-        if not np.isfinite(r.high[0]):
-            return -np.inf, None
-        c = gain_for_overshoot(
-            job.model, job.shape(time, share * time, float(r.high[0])), float(r.low[0]), limit, coarse=True
-        )
-        return (-np.inf, None) if c is None else (c.gain / time, c)
-
-    at = np.log(start.integral_time) + np.linspace(-0.5, 2.0, 6)
-    tried = [fastest(float(x)) for x in at]
-    k = int(np.argmax([v for v, _ in tried]))
-    if tried[k][1] is None:
+    top = job.shape(shape.integral, shape.derivative, shape.gain)
+    r = ends(job, top, criteria)
+    if not np.isfinite(r.high[0]):
         return None
-    x, value = float(at[k]), tried[k]
-    step = float(at[1] - at[0])
-    for _ in range(3):
-        step *= 0.5
-        for side in (x - step, x + step):
-            other = fastest(side)
-            if other[0] > value[0]:
-                x, value = side, other
-    best = value[1]
-    assert best is not None
-    ends = _ends(job, best, criteria)
-    if not np.isfinite(ends.high[0]):
+    top = replace(top, gain=float(r.high[0]))
+    found = gain_within(job.model, top, float(r.low[0]), criteria, guess=shape.gain)
+    if found is None:
         return None
-    return gain_for_overshoot(job.model, replace(best, gain=float(ends.high[0])), float(ends.low[0]), limit)
+    controller, by = found
+    # Where a longer integral time alone brought the overshoot down, a margin binds again.
+    return controller, float(r.low[0]), int(r.low_by[0]), by or NAMES[max(int(r.high_by[0]), 0)]
 
 
-def _without_settings(job: _Job, remarks: list[Caution]) -> Tuning:
+def cures(job: Job, criteria: Criteria) -> tuple[str, ...]:
+    """Say what would reach criteria that cannot be reached as things are.
+
+    Parameters
+    ----------
+    job : Job
+    criteria : Criteria
+
+    Returns
+    -------
+    tuple of str
+        A richer controller, or less dead time, whichever would; empty if none of those tried.
+    """
+    found = []
+    for kind in _RICHER[job.pattern.kind]:
+        if fastest(replace(job, pattern=replace(job.pattern, kind=kind)), criteria) is not None:
+            found.append(f"a {kind} controller")
+            break
+    dead_time = job.model.dead_time
+    for share in _LESS_DEAD_TIME if dead_time > 0.0 else ():
+        if fastest(replace(job, model=replace(job.model, dead_time=share * dead_time)), criteria) is not None:
+            found.append(f"a dead time of {share * dead_time:.2g} s instead of {dead_time:.2g} s")
+            break
+    return tuple(found)
+
+
+def _without_settings(job: Job, remarks: list[Caution]) -> Tuning:
     """No gain of this kind of controller closes a stable loop: say so, with the gain at nothing."""
     controller = job.shape(1.0 if job.pattern.kind in ("I", "PI", "PID") else np.inf, 0.0, 1e-12)
-    remarks.append(
-        Caution(
-            code="no-stabilising-gain",
-            level="stop",
-            value=None,
-            limit=None,
-            text=f"No gain of a {job.pattern.kind} controller makes this loop stable. Choose another kind.",
-        )
-    )
+    remarks.append(remark.no_stabilising_gain(job.pattern.kind))
     return Tuning(
         model=job.model,
         controller=controller,
@@ -378,5 +212,6 @@ def _without_settings(job: _Job, remarks: list[Caution]) -> Tuning:
         prediction=predict(job.model, controller),
         binding="phase_margin",
         reached=False,
+        lowest_gain=0.0,
         remarks=tuple(remarks),
     )

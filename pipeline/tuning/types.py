@@ -27,8 +27,16 @@ class Criteria:
         At least this, upwards, and at least its inverse downwards where the loop has a lower limit [1].
     max_sensitivity : float or None
         At most this [1].
+    max_complementary : float or None
+        At most this, above one [1].
+    closed_loop_time : float or None
+        Closed-loop time constant at least this [s].
     overshoot : float or None
         At most this on a set-point step [%].
+    noise_gain : float or None
+        CO's standard deviation over the PV noise's at most this [CO unit / PV unit].
+    co_peak : float or None
+        CO's largest move after a unit set-point step at most this [CO unit / PV unit].
     percentile : float
         Share of the plausible models below which the phase margin may fall short of
         `percentile_phase_margin` [%].
@@ -39,7 +47,11 @@ class Criteria:
     phase_margin: float | None = 60.0
     gain_margin: float | None = 2.5
     max_sensitivity: float | None = 1.8
+    max_complementary: float | None = None
+    closed_loop_time: float | None = None
     overshoot: float | None = 10.0
+    noise_gain: float | None = None
+    co_peak: float | None = None
     percentile: float = 5.0
     percentile_phase_margin: float | None = 45.0
 
@@ -57,9 +69,11 @@ class Tuning:
     margins : Margins
     prediction : Prediction
     binding : str
-        Criterion that set the gain: "phase_margin", "gain_margin", "max_sensitivity", "overshoot".
+        Criterion that set the gain, by its name in `Criteria`.
     reached : bool
         False when some criterion cannot be met at any gain; the settings then are the best reachable.
+    lowest_gain : float
+        Lower end of the gains that keep the criteria at these times; zero without one [CO unit / PV unit].
     remarks : tuple of Caution
         What the reader must know about how these settings came about.
     """
@@ -70,6 +84,7 @@ class Tuning:
     prediction: Prediction
     binding: str
     reached: bool
+    lowest_gain: float
     remarks: tuple[Caution, ...]
 
 

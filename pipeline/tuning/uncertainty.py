@@ -13,14 +13,16 @@ from pipeline.loop.batch_response import batch_final, batch_overshoot, batch_set
 from pipeline.loop.margins import MarginTable, margin_table, margins
 from pipeline.loop.simulate import predict
 from pipeline.loop.stack import stack_loops
-from pipeline.tuning.types import BackedOff, Bands
+from pipeline.loop.sweep import Grid
+from pipeline.tuning.criteria import gain_range
+from pipeline.tuning.types import BackedOff, Bands, Criteria
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from fitters.process import ProcessModel
     from pipeline.loop.types import Controller
-    from pipeline.tuning.types import Criteria, Tuning
+    from pipeline.tuning.types import Tuning
 
     Reals = NDArray[np.float64]
 
@@ -34,6 +36,10 @@ _HORIZON = 3.0
 _FACTORS = np.geomspace(1.0, 0.1, 14)
 #: The factor is found to this [1].
 _FACTOR_TOLERANCE = 1e-3
+#: A percentile this little above what was asked is met [degrees].
+_NEAR = 0.02
+#: Grid of each model's own range of gains.
+_LIMITS_GRID = Grid(per_decade=40, floor=0.3, reach=1e2)
 #: A gain is given up for at least so much phase margin at the percentile [degrees].
 _WORTH_SLOWING = 3.0
 
@@ -66,7 +72,7 @@ def _bands(models: Sequence[ProcessModel], controller: Controller, table: Margin
         settled = nominal.settling_time if np.isfinite(nominal.settling_time) else end
         horizon = min(_HORIZON * settled, 2.0 * end)
         t, pv = batch_setpoint(kept, [controller], horizon=horizon, points=_POINTS)
-        over[stable] = batch_overshoot(pv, batch_final(kept, controller))
+        over[stable] = batch_overshoot(pv, batch_final(kept, [controller]))
         low, high = np.percentile(pv, [_PERCENTILES[0], _PERCENTILES[2]], axis=0)
     else:
         t = low = high = np.zeros(0)
@@ -132,6 +138,16 @@ class _Slower:
         """Give the phase margin at a percentile of the models."""
         return held_phase_margin(self.models, self.settings(factor), percentile)
 
+    def lowered(self, percentile: float, asked: float) -> float | None:
+        """Give the largest factor on the gain alone that holds, from each model's own range of gains."""
+        only = Criteria(phase_margin=asked, gain_margin=None, max_sensitivity=None, overshoot=None)
+        r = gain_range(stack_loops(self.models, [self.controller]), only, _LIMITS_GRID)
+        low, high = (np.nan_to_num(x, nan=end) for x, end in ((r.low, np.inf), (r.high, 0.0)))
+        # The grid's straight lines may leave an end a little too high.
+        tried = np.unique(np.minimum(high[high > 0.0], 1.0))[::-1] * (1.0 - _FACTOR_TOLERANCE)
+        needed = (1.0 - percentile / 100.0) * len(self.models)
+        return next((float(f) for f in tried if np.sum((low <= f) & (f <= high)) >= needed), None)
+
 
 def back_off(tuning: Tuning, models: Sequence[ProcessModel], criteria: Criteria) -> BackedOff:
     """Lower the gain until the percentile phase margin holds.
@@ -195,32 +211,30 @@ def back_off(tuning: Tuning, models: Sequence[ProcessModel], criteria: Criteria)
 
 def _factor(slower: _Slower, percentile: float, asked: float) -> tuple[float, bool, float]:
     """Give the largest factor that holds, whether one does, and the phase margin there."""
-    above = 1.0
-    value = slower.held(1.0, percentile)
-    if value >= asked:
-        return 1.0, True, value
-    first = value
-    best = (value, 1.0)
-    over = value
-    for x in _FACTORS[1:]:
+    first = slower.held(1.0, percentile)
+    if first >= asked:
+        return 1.0, True, first
+    guess = None if slower.stretched else slower.lowered(percentile, asked)
+    above, over, best = 1.0, first, (first, 1.0)
+    ladder = _FACTORS[1:] if guess is None else np.array([guess, *_FACTORS[guess > _FACTORS]])
+    for x in ladder:
         value = slower.held(float(x), percentile)
         if value >= asked:
             break
-        if value > best[0]:
-            best = (value, float(x))
+        best = max(best, (value, float(x)))
         above, over = float(x), value
     else:
         # nothing holds it: slow down only for a gain worth having
         return (best[1], False, best[0]) if best[0] > first + _WORTH_SLOWING else (1.0, False, first)
+    if guess is not None and float(x) == guess:
+        return guess, True, value
     below, under = float(x), value
-    while above - below > _FACTOR_TOLERANCE:
+    while above - below > _FACTOR_TOLERANCE and under - asked >= _NEAR:
         guess = below + (above - below) * (under - asked) / max(under - over, 1e-12)
         guess = min(max(guess, below + 0.1 * (above - below)), above - 0.1 * (above - below))
         value = slower.held(guess, percentile)
         if value >= asked:
             below, under = guess, value
-            if value - asked < 0.02:
-                break
         else:
             above, over = guess, value
     return below, True, under
