@@ -99,6 +99,8 @@ def _plan(model: ProcessModel, controller: Controller) -> _Plan:
         fast = max(float(marks.max(initial=0.0)), 2.0 / delay if delay > 0.0 else 0.0)
     else:
         fast = float(omega[felt[-1]])
+    # A runaway the feedback does not reach must still be followed.
+    fast = max(fast, float(np.max(np.abs(model.unstable_poles), initial=0.0)))
     h = _FINENESS / fast
     if delay > 0.0:
         if delay >= h:

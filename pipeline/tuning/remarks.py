@@ -42,19 +42,40 @@ def no_gain_limit(assumed: float) -> Caution:
     )
 
 
-def no_stabilising_gain(kind: str) -> Caution:
-    """Say that no gain of this kind of controller closes a stable loop.
+def no_stabilising_gain(model: ProcessModel, kind: str) -> Caution:
+    """Say that no gain of this kind of controller closes a stable loop, and why.
 
     Parameters
     ----------
+    model : ProcessModel
     kind : str
+
+    References
+    ----------
+    Silva, Datta and Bhattacharyya (2002), IEEE Trans. Automatic Control 47, 241-252: a lag
+    that runs away needs a dead time below its time constant, with derivative action below twice it.
     """
+    runaway = float(np.max(model.unstable_poles.real, initial=0.0))
+    if runaway > 0.0 and model.inverse_zeros.size:
+        why = "The process runs away by itself and first moves the wrong way, too slowly for its runaway."
+    elif runaway > 0.0:
+        why = (
+            f"The process runs away with a time constant of {1.0 / runaway:.3g} s at a dead time of "
+            f"{model.dead_time:.3g} s: the dead time must be shorter than that time constant, with derivative "
+            "action shorter than twice it."
+        )
+    elif model.integrators >= 2 and kind in ("P", "I", "PI"):
+        why = "A process that integrates twice needs derivative action."
+    elif kind == "I" and model.integrators:
+        why = "A process that integrates needs proportional action."
+    else:
+        why = "Choose another kind."
     return Caution(
         code="no-stabilising-gain",
         level="stop",
-        value=None,
-        limit=None,
-        text=f"No gain of a {kind} controller makes this loop stable. Choose another kind.",
+        value=model.dead_time,
+        limit=1.0 / runaway if runaway > 0.0 else None,
+        text=f"No gain of a {kind} controller makes this loop stable. {why}",
     )
 
 

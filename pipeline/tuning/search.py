@@ -274,7 +274,8 @@ def largest_share(job: Job, criteria: Criteria) -> tuple[float, Shape | None]:
         None where no settings make the loop stable.
     """
     times, shares = _first_grid(job)
-    low, best = _raised(job, criteria, times, shares, 0.0, 1.0, _HALVINGS)
+    halvings = _HALVINGS if times.size > 1 else 2 * _HALVINGS  # no closer rounds follow
+    low, best = _raised(job, criteria, times, shares, 0.0, 1.0, halvings)
     step = _step(times)
     for closeness in range(_ROUNDS if best is not None and times.size > 1 else 0):
         assert best is not None

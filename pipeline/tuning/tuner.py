@@ -204,7 +204,7 @@ def cures(job: Job, criteria: Criteria) -> tuple[str, ...]:
 def _without_settings(job: Job, remarks: list[Caution]) -> Tuning:
     """No gain of this kind of controller closes a stable loop: say so, with the gain at nothing."""
     controller = job.shape(1.0 if job.pattern.kind in ("I", "PI", "PID") else np.inf, 0.0, 1e-12)
-    remarks.append(remark.no_stabilising_gain(job.pattern.kind))
+    remarks.append(remark.no_stabilising_gain(job.model, job.pattern.kind))
     return Tuning(
         model=job.model,
         controller=controller,
