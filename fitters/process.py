@@ -112,6 +112,32 @@ class ProcessModel:
         zeros = self.zeros
         return zeros[zeros.real > 0.0]
 
+    def effective_dead_time(self, kept: int = 1) -> float:
+        """Give the dead time that a controller meets: the true one, and what the lags not kept add.
+
+        Parameters
+        ----------
+        kept : int
+            Lags and integrators the controller counts with: one for a PI, two with derivative action.
+
+        Returns
+        -------
+        float
+            [s].
+
+        References
+        ----------
+        Skogestad (2003), J. Process Control 13, 291-309, half rule: half of the largest lag
+        neglected, all of the others and of the zeros in the right half-plane.
+        """
+        poles = np.abs(self.poles)
+        lags = np.sort(1.0 / poles[poles > 0.0])[::-1]
+        left = lags[max(kept - self.integrators, 0) :]
+        inverse = float(np.sum(1.0 / np.abs(self.inverse_zeros)))
+        return (
+            self.dead_time + inverse + (float(left[0]) / 2.0 + float(np.sum(left[1:])) if left.size else 0.0)
+        )
+
     @cached_property
     def high_frequency_gain(self) -> float:
         """Direct share of the output in the PV, zero for a strictly proper process [PV/CO]."""

@@ -83,7 +83,9 @@ def plausible(choice: Choice, floor: Floor, count: int, seed: int) -> dict[str, 
     drawn = best.draw(count, seed)
     out = {"noise in the log": drawn}
     if choice.gain_scatter is not None:
-        out["scatter between moves"] = _spread(drawn, seed + 1, Floor(gain=_missing(best, choice.gain_scatter)))
+        out["scatter between moves"] = _spread(
+            drawn, seed + 1, Floor(gain=_missing(best, choice.gain_scatter))
+        )
     believed = [choice.candidates[0]]
     believed += [c for c in choice.candidates[1:] if c.weight >= _BELIEVED and _determined(c.fit)]
     if len(believed) > 1:

@@ -197,7 +197,7 @@ def _check(wish: _Wish) -> None:
 
 
 def _sheet(path: Path) -> LoopSheet:
-    from pipeline.settings import load_sheet
+    from pipeline.sheetfile import load_sheet
 
     return load_sheet(path)
 

@@ -148,17 +148,20 @@ def dead_time_rules(facts: Facts) -> Caution | None:
 
 
 def dead_time_floored(facts: Facts) -> Caution | None:
-    """Say that the dead time was floored."""
-    if facts.choice is None or facts.choice.best.model.dead_time >= facts.dead_time_floor:
+    """Say that the dead time was raised to what is believable."""
+    if facts.choice is None or facts.tuning is None:
+        return None
+    shown, used = facts.choice.best.model.dead_time, facts.tuning.model.dead_time
+    if used <= shown or facts.dead_time_floor == 0.0:
         return None
     return Caution(
         code="dead-time-floor",
         level="care",
-        text=f"The log shows a dead time of {facts.choice.best.model.dead_time:.3g} s, less than it can tell. "
-        f"{facts.dead_time_floor:.3g} s is used as the least believable value: half a log interval, and "
-        "what the controller adds by itself.",
-        value=facts.choice.best.model.dead_time,
-        limit=facts.dead_time_floor,
+        text=f"The log shows a dead time of {shown:.3g} s, less than it can tell. {used:.3g} s is used: with "
+        f"what the smaller lags add, half a log interval ({facts.dead_time_floor:.3g} s) is the least "
+        "believable delay.",
+        value=shown,
+        limit=used,
     )
 
 

@@ -23,6 +23,7 @@ Integral = Literal[
     "repeats per second",
     "gain per second",
     "gain per minute",
+    "gain per scan",
 ]
 Derivative = Literal["seconds", "minutes", "gain in seconds", "gain in minutes"]
 
@@ -45,6 +46,10 @@ class Entry:
         Units of entry.
     pv_span, co_span : float or None
         Ranges of PV and CO in their columns' units; needed on a span basis.
+    scan : float
+        Execution interval; needed for a gain per scan [s].
+    proportional_step, integral_step, derivative_step : float or None
+        Smallest change each setting can be entered with, in its own unit.
     """
 
     equation: Equation = "standard"
@@ -54,6 +59,10 @@ class Entry:
     derivative: Derivative = "seconds"
     pv_span: float | None = None
     co_span: float | None = None
+    scan: float = 0.0
+    proportional_step: float | None = None
+    integral_step: float | None = None
+    derivative_step: float | None = None
 
     def span_factor(self) -> float:
         """Give the entered gain over the gain in engineering units [1].
@@ -216,6 +225,8 @@ def understand(entered: Entered, entry: Entry) -> tuple[float | None, float, flo
             raise UsageError("The controller has neither a proportional nor an integral setting.")
         per = _MINUTE if entry.integral in ("gain per minute", "repeats per minute") else 1.0
         value = entered.integral
+        if entry.integral == "gain per scan":
+            per = entry.scan
         if entry.integral in ("seconds per repeat", "minutes per repeat"):
             value, per = 1.0 / value, (_MINUTE if entry.integral == "minutes per repeat" else 1.0)
         return value / per / factor, 1.0, 0.0
@@ -237,6 +248,7 @@ def _integral_only(gain: float, entry: Entry) -> float:
         "repeats per second": gain,
         "gain per second": gain,
         "gain per minute": gain * _MINUTE,
+        "gain per scan": gain * entry.scan,
     }[entry.integral]
 
 
@@ -248,6 +260,7 @@ def _integral(gain: float, ti: float, entry: Entry) -> float:
         "repeats per second": 1.0 / ti,
         "gain per second": gain / ti,
         "gain per minute": gain / ti * _MINUTE,
+        "gain per scan": gain / ti * entry.scan,
     }[entry.integral]
 
 
@@ -259,6 +272,7 @@ def _integral_time(gain: float, value: float, entry: Entry) -> float:
         "repeats per second": 1.0 / value,
         "gain per second": gain / value,
         "gain per minute": gain / value * _MINUTE,
+        "gain per scan": gain / value * entry.scan,
     }[entry.integral]
 
 

@@ -113,6 +113,18 @@ def _plan(model: ProcessModel, controller: Controller) -> _Plan:
     return _Plan(loop=loop, delay=delay, h=h, n=n + int(delay / h) + 1)
 
 
+def time_grid(model: ProcessModel, controller: Controller) -> tuple[float, int]:
+    """Give the interval [s] and the number of points on which a loop is simulated.
+
+    Parameters
+    ----------
+    model : ProcessModel
+    controller : Controller
+    """
+    plan = _plan(model, controller)
+    return plan.h, plan.n
+
+
 def predict(model: ProcessModel, controller: Controller) -> Prediction:
     """Simulate a unit set-point step and a unit load step with exact dead time.
 

@@ -115,11 +115,6 @@ def settings(
     found : tuple of (Entered, Margins, float or None) or None
         Settings found in the controller, their margins and overshoot.
     pv_unit, co_unit : str or None
-
-    Raises
-    ------
-    UsageError
-        If the controller's equation cannot hold the settings, or a span it needs is missing.
     """
     as_found = None
     if found is not None:
@@ -130,7 +125,7 @@ def settings(
             overshoot_pct=overshoot,
         )
     return Settings(
-        controller=parts.controller_info(backed_off.controller, entry, pv_unit, co_unit),
+        controller=parts.controller_info(backed_off.controller, backed_off.entered, entry, pv_unit, co_unit),
         backed_off=backed_off,
         binding=tuning.binding,
         source=source,

@@ -193,7 +193,11 @@ def criteria_info(criteria: Criteria) -> CriteriaInfo:
         phase_margin_deg=criteria.phase_margin,
         gain_margin=criteria.gain_margin,
         max_sensitivity=criteria.max_sensitivity,
+        max_complementary=criteria.max_complementary,
+        closed_loop_time_s=criteria.closed_loop_time,
         overshoot_pct=criteria.overshoot,
+        noise_gain=criteria.noise_gain,
+        co_peak=criteria.co_peak,
         percentile=criteria.percentile,
         percentile_phase_margin_deg=criteria.percentile_phase_margin,
     )
@@ -244,21 +248,18 @@ def shown_gain(gain: float, entry: Entry) -> float:
 
 
 def controller_info(
-    controller: Controller, entry: Entry, pv_unit: str | None, co_unit: str | None
+    controller: Controller, entered: forms.Entered, entry: Entry, pv_unit: str | None, co_unit: str | None
 ) -> ControllerInfo:
     """Give the settings.
 
     Parameters
     ----------
     controller : Controller
+    entered : pipeline.loop.forms.Entered
+        The same in the controller's own units.
     entry : Entry
         How the controller takes its settings.
     pv_unit, co_unit : str or None
-
-    Raises
-    ------
-    UsageError
-        If the controller's equation cannot hold the settings, or a span it needs is missing.
     """
     on_span = entry.pv_span is not None and entry.co_span is not None
     gain = shown_gain(controller.gain, entry)
@@ -278,7 +279,7 @@ def controller_info(
         pv_filter_s=controller.pv_filter,
         scan_s=controller.scan,
         compute_delay_s=controller.compute_delay,
-        as_entered=as_typed(forms.enter(controller, entry), entry, pv_unit, co_unit),
+        as_entered=as_typed(entered, entry, pv_unit, co_unit),
     )
 
 

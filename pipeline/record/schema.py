@@ -218,7 +218,11 @@ class CriteriaInfo(Part):
     phase_margin_deg: Number | None
     gain_margin: Number | None
     max_sensitivity: Number | None
+    max_complementary: Number | None = None
+    closed_loop_time_s: Number | None = None
     overshoot_pct: Number | None
+    noise_gain: Number | None = None
+    co_peak: Number | None = None
     percentile: Number | None
     percentile_phase_margin_deg: Number | None = None
 

@@ -29,6 +29,8 @@ NAMES = (
     "closed_loop_time",
     "noise_gain",
 )
+#: Gains beyond this, up or down, are nobody's [ln gain].
+_ABSURD = 60.0
 #: Where to test a gap that has no end [ln gain].
 _BEYOND = 0.7
 
@@ -108,7 +110,7 @@ def gain_range(
     )
     own = [slice(a, b) for a, b in pairwise(ends)]
     gaps = [_gaps(low[i], high[i], kind[i]) for i in own]
-    flat = [(i, g) for i, row in enumerate(gaps) for g in row]
+    flat = [(i, g) for i, row in enumerate(gaps) for g in row if abs(g[4]) < _ABSURD]
     if not flat:
         return found
     at = np.array([i for i, _ in flat], dtype=np.intp)

@@ -163,7 +163,8 @@ def _for_overshoot(model: ProcessModel, top: Controller, overshoot: float) -> fl
     found = gain_within(model, top, 0.0, Criteria(overshoot=overshoot))
     if found is None or found[1] == "":
         return None
-    return margins(model, found[0]).phase_margin
+    reached = margins(model, found[0]).phase_margin
+    return reached if np.isfinite(reached) else None
 
 
 def _doubts(usual: GuidePoint | None, lower: GuidePoint | None) -> str:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 from fitters.spread import Floor, plausible
@@ -11,7 +11,9 @@ from pipeline.loop.forms import Entered, Entry, action_for, understand
 from pipeline.loop.margins import margins
 from pipeline.loop.simulate import overshoot
 from pipeline.loop.types import Controller
-from pipeline.tuning.tuner import tune
+from pipeline.tuning.duties import USUAL
+from pipeline.tuning.search import filter_time
+from pipeline.tuning.tuner import tune, with_floor
 from pipeline.tuning.types import Criteria
 from pipeline.tuning.uncertainty import back_off, held_phase_margin
 
@@ -26,7 +28,7 @@ if TYPE_CHECKING:
 PLAUSIBLE = 512
 #: Fixed, so that one log gives one record.
 _SEED = 20_261_201
-#: Share of a log interval by which a dead time may be missed at both ends: held CO, sampled PV [1].
+#: Share of a log interval below which no effective dead time is believed: held CO, sampled PV [1].
 _UNSEEN_SHARE = 0.5
 
 
@@ -46,6 +48,8 @@ class Wanted:
         [s].
     derivative_filter_ratio : float
         Derivative time over its filter [1].
+    derivative_filter : float or None
+        The derivative's filter where it is fixed [s].
     floor : Floor
         Least scatter of the process to allow for.
     """
@@ -59,6 +63,7 @@ class Wanted:
     scan: float
     compute_delay: float
     derivative_filter_ratio: float
+    derivative_filter: float | None
     floor: Floor
 
 
@@ -72,7 +77,7 @@ class Recommended:
         On the nominal model, before the back-off.
     backed_off : BackedOff
     dead_time_floor : float
-        Dead time assumed at least [s].
+        Effective dead time assumed at least [s].
     source : str
         What the plausible processes were drawn from: the widest source of doubt.
     """
@@ -105,7 +110,7 @@ def wanted(
     overshoot_pct : float or None
         [%].
     """
-    asked, usual, c = sheet.criteria, Criteria(), sheet.controller
+    asked, usual, c = sheet.criteria, USUAL[sheet.loop.duty], sheet.controller
     phase = _first(phase_margin, asked.phase_margin_deg, usual.phase_margin)
     least = _first(asked.percentile_phase_margin_deg, usual.percentile_phase_margin)
     if asked.percentile_phase_margin_deg is None and least is not None and phase is not None:
@@ -117,7 +122,11 @@ def wanted(
             phase_margin=phase,
             gain_margin=_first(gain_margin, asked.gain_margin, usual.gain_margin),
             max_sensitivity=_first(max_sensitivity, asked.max_sensitivity, usual.max_sensitivity),
+            max_complementary=asked.max_complementary,
+            closed_loop_time=asked.closed_loop_time_s,
             overshoot=_first(overshoot_pct, asked.overshoot_pct, usual.overshoot),
+            noise_gain=asked.noise_gain,
+            co_peak=asked.co_peak,
             percentile=asked.percentile or usual.percentile,
             percentile_phase_margin=least,
         ),
@@ -128,6 +137,7 @@ def wanted(
         scan=_number(c.scan_s, 0.0),
         compute_delay=_number(c.compute_delay_s, 0.0),
         derivative_filter_ratio=_number(c.derivative_filter_ratio, 10.0),
+        derivative_filter=c.derivative_filter_s,
         floor=Floor(
             gain=_number(sheet.uncertainty.gain_pct, 0.0) / 100.0,
             lags=_number(sheet.uncertainty.lags_pct, 0.0) / 100.0,
@@ -155,6 +165,10 @@ def entry_of(sheet: LoopSheet) -> Entry:
         derivative=c.derivative or usual.derivative,
         pv_span=pv_span,
         co_span=co_span,
+        scan=c.scan_s or 0.0,
+        proportional_step=c.proportional_step,
+        integral_step=c.integral_step,
+        derivative_step=c.derivative_step,
     )
 
 
@@ -180,14 +194,15 @@ def recommend(choice: Choice, asked: Wanted, *, log_interval: float) -> Recommen
     """
     floor = _UNSEEN_SHARE * log_interval
     tuning = tune_model(choice.best.model, asked, dead_time_floor=floor)
+    kind = tuning.controller.kind
     sources = {
-        name: [_floored(model, floor) for model in models]
+        name: [with_floor(model, kind, floor) for model in models]
         for name, models in plausible(choice, asked.floor, PLAUSIBLE, _SEED).items()
     }
     percentile = asked.criteria.percentile
     worst = {n: held_phase_margin(m, tuning.controller, percentile) for n, m in sources.items()}
     source = min(worst, key=lambda name: worst[name])
-    backed_off = back_off(tuning, sources[source], asked.criteria)
+    backed_off = back_off(tuning, sources[source], asked.criteria, asked.entry)
     check_agreement(tuning.model, backed_off.controller, backed_off.margins, backed_off.prediction)
     return Recommended(tuning=tuning, backed_off=backed_off, dead_time_floor=floor, source=source)
 
@@ -200,7 +215,7 @@ def tune_model(model: ProcessModel, asked: Wanted, *, dead_time_floor: float) ->
     model : ProcessModel
     asked : Wanted
     dead_time_floor : float
-        Dead time assumed at least [s].
+        Effective dead time assumed at least [s].
     """
     return tune(
         model,
@@ -212,6 +227,7 @@ def tune_model(model: ProcessModel, asked: Wanted, *, dead_time_floor: float) ->
         scan=asked.scan,
         compute_delay=asked.compute_delay,
         derivative_filter_ratio=asked.derivative_filter_ratio,
+        derivative_filter=asked.derivative_filter,
         dead_time_floor=dead_time_floor,
     )
 
@@ -237,7 +253,7 @@ def as_found(
     sheet : LoopSheet
     asked : Wanted
     floor : float
-        Dead time assumed at least [s].
+        Effective dead time assumed at least [s].
 
     Returns
     -------
@@ -266,20 +282,18 @@ def as_found(
         action=action_for(fit.model.gain),
         integral_time=integral_time,
         derivative_time=derivative_time,
-        derivative_filter=derivative_time / asked.derivative_filter_ratio,
+        derivative_filter=filter_time(
+            derivative_time, asked.derivative_filter_ratio, asked.derivative_filter
+        ),
         setpoint_weight=asked.setpoint_weight,
         derivative_setpoint_weight=asked.derivative_setpoint_weight,
         pv_filter=asked.pv_filter,
         scan=asked.scan,
         compute_delay=asked.compute_delay,
     )
-    model = _floored(fit.model, floor)
+    model = with_floor(fit.model, kind, floor)
     reached = margins(model, controller)
     return entered, reached, overshoot(model, controller) if reached.stable else None
-
-
-def _floored(model: ProcessModel, floor: float) -> ProcessModel:
-    return model if model.dead_time >= floor else replace(model, dead_time=floor)
 
 
 def _first(*values: float | None) -> float | None:

@@ -65,6 +65,8 @@ class Job:
     pattern : Controller
     ratio : float
         Derivative time over its filter [1].
+    fixed_filter : float or None
+        The derivative's filter where it does not follow the derivative time [s].
     scales : (n,) ndarray
         The loop's own times [s].
     """
@@ -72,6 +74,7 @@ class Job:
     model: ProcessModel
     pattern: Controller
     ratio: float
+    fixed_filter: float | None
     scales: Reals
 
     @property
@@ -80,18 +83,48 @@ class Job:
         return self.pattern.kind in ("PI", "PID")
 
     def shape(self, integral: float, derivative: float, gain: float = 1.0) -> Controller:
-        """Give the controller with these times [s] and this gain."""
+        """Give the controller with these times and this gain.
+
+        Parameters
+        ----------
+        integral, derivative : float
+            [s].
+        gain : float
+            [CO unit / PV unit].
+        """
         return replace(
             self.pattern,
             gain=gain,
             integral_time=integral,
             derivative_time=derivative,
-            derivative_filter=derivative / self.ratio,
+            derivative_filter=filter_time(derivative, self.ratio, self.fixed_filter),
         )
 
     def speed(self, shape: Shape) -> float:
-        """Give what is maximised: integral gain, or gain without integral action."""
+        """Give what is maximised: integral gain, or gain without integral action.
+
+        Parameters
+        ----------
+        shape : Shape
+        """
         return shape.gain / shape.integral if self.integrates else shape.gain
+
+
+def filter_time(derivative: float, ratio: float, fixed: float | None) -> float:
+    """Give the derivative's filter time: fixed, or a share of the derivative time; none without derivative.
+
+    Parameters
+    ----------
+    derivative : float
+        [s].
+    ratio : float
+        Derivative time over its filter [1].
+    fixed : float or None
+        [s].
+    """
+    if derivative == 0.0:
+        return 0.0
+    return derivative / ratio if fixed is None else fixed
 
 
 def time_scales(model: ProcessModel, pattern: Controller) -> Reals:

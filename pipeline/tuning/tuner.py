@@ -48,6 +48,7 @@ def tune(
     scan: float = 0.0,
     compute_delay: float = 0.0,
     derivative_filter_ratio: float = 10.0,
+    derivative_filter: float | None = None,
     dead_time_floor: float = 0.0,
 ) -> Tuning:
     """Find the settings with the largest integral gain that keep every criterion.
@@ -64,8 +65,10 @@ def tune(
         As the controller has them [s].
     derivative_filter_ratio : float
         Derivative time over its filter [1].
+    derivative_filter : float, optional
+        The filter where it is fixed [s]; otherwise it follows the derivative time.
     dead_time_floor : float
-        Least dead time to count on [s].
+        Least effective dead time to count on [s].
 
     Returns
     -------
@@ -78,7 +81,7 @@ def tune(
     -----
     PID keeps Ti >= 4 Td, so that every controller equation can hold the result.
     """
-    held = replace(model, dead_time=max(model.dead_time, dead_time_floor))
+    held = with_floor(model, kind, dead_time_floor)
     pattern = Controller(
         kind=kind,
         gain=1.0,
@@ -89,8 +92,29 @@ def tune(
         scan=scan,
         compute_delay=compute_delay,
     )
-    job = Job(model=held, pattern=pattern, ratio=derivative_filter_ratio, scales=time_scales(held, pattern))
+    job = Job(
+        model=held,
+        pattern=pattern,
+        ratio=derivative_filter_ratio,
+        fixed_filter=derivative_filter,
+        scales=time_scales(held, pattern),
+    )
     return _tuned(job, criteria)
+
+
+def with_floor(model: ProcessModel, kind: Kind, floor: float) -> ProcessModel:
+    """Give the model with its dead time raised where the effective one is less than is believable.
+
+    Parameters
+    ----------
+    model : ProcessModel
+    kind : {"P", "I", "PI", "PD", "PID"}
+        Derivative action sees past one lag more.
+    floor : float
+        Least effective dead time [s].
+    """
+    short = floor - model.effective_dead_time(kept=2 if kind in ("PD", "PID") else 1)
+    return model if short <= 0.0 else replace(model, dead_time=model.dead_time + short)
 
 
 def _tuned(job: Job, criteria: Criteria) -> Tuning:

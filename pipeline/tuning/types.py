@@ -12,6 +12,7 @@ if TYPE_CHECKING:
 
     from fitters.process import ProcessModel
     from pipeline.findings import Caution
+    from pipeline.loop.forms import Entered
     from pipeline.loop.types import Controller, Margins, Prediction
 
 
@@ -116,11 +117,14 @@ class Bands:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class BackedOff:
-    """Settings after the back-off for uncertainty.
+    """Settings after the back-off for uncertainty, as they can be entered.
 
     Attributes
     ----------
     controller : Controller
+        With the rounded numbers; margins, prediction and bands are of these.
+    entered : Entered
+        The rounded numbers in the controller's own units.
     margins : Margins
     prediction : Prediction
     bands : Bands
@@ -133,6 +137,7 @@ class BackedOff:
     """
 
     controller: Controller
+    entered: Entered
     margins: Margins
     prediction: Prediction
     bands: Bands

@@ -11,6 +11,7 @@ import numpy as np
 from pipeline.findings import Caution
 from pipeline.loop.batch_response import batch_final, batch_overshoot, batch_setpoint
 from pipeline.loop.margins import MarginTable, margin_table, margins
+from pipeline.loop.rounding import rounded
 from pipeline.loop.simulate import predict
 from pipeline.loop.stack import stack_loops
 from pipeline.loop.sweep import Grid
@@ -21,6 +22,7 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from fitters.process import ProcessModel
+    from pipeline.loop.forms import Entry
     from pipeline.loop.types import Controller
     from pipeline.tuning.types import Tuning
 
@@ -131,9 +133,6 @@ class _Slower:
         longer = c.integral_time / factor if self.stretched else c.integral_time
         return replace(c, gain=c.gain * factor, integral_time=longer)
 
-    def table(self, factor: float) -> MarginTable:
-        return margin_table(stack_loops(self.models, [self.settings(factor)]))
-
     def held(self, factor: float, percentile: float) -> float:
         """Give the phase margin at a percentile of the models."""
         return held_phase_margin(self.models, self.settings(factor), percentile)
@@ -149,8 +148,8 @@ class _Slower:
         return next((float(f) for f in tried if np.sum((low <= f) & (f <= high)) >= needed), None)
 
 
-def back_off(tuning: Tuning, models: Sequence[ProcessModel], criteria: Criteria) -> BackedOff:
-    """Lower the gain until the percentile phase margin holds.
+def back_off(tuning: Tuning, models: Sequence[ProcessModel], criteria: Criteria, entry: Entry) -> BackedOff:
+    """Lower the gain until the percentile phase margin holds, and round to what can be entered.
 
     Parameters
     ----------
@@ -158,11 +157,13 @@ def back_off(tuning: Tuning, models: Sequence[ProcessModel], criteria: Criteria)
     models : sequence of ProcessModel
         Plausible models of one structure.
     criteria : Criteria
+    entry : Entry
+        How the controller takes its settings.
 
     Returns
     -------
     BackedOff
-        The largest factor up to one on the gain that holds the phase margin at the
+        Of the rounded settings, after the largest factor up to one on the gain that holds the phase margin at the
         percentile. `held` is False where no factor does, as on loops that need their gain;
         the factor is then the one that comes nearest, and a remark says so.
     """
@@ -196,12 +197,13 @@ def back_off(tuning: Tuning, models: Sequence[ProcessModel], criteria: Criteria)
                 "on an integrating process a lower gain alone would roll.",
             )
         )
-    controller = slower.settings(factor)
-    table = slower.table(factor)
+    controller, entered = rounded(slower.settings(factor), entry)
+    table = margin_table(stack_loops(models, [controller]))
     return BackedOff(
         controller=controller,
-        margins=tuning.margins if factor == 1.0 else margins(tuning.model, controller),
-        prediction=tuning.prediction if factor == 1.0 else predict(tuning.model, controller),
+        entered=entered,
+        margins=margins(tuning.model, controller),
+        prediction=predict(tuning.model, controller),
         bands=_bands(models, controller, table),
         factor=factor,
         held=held,

@@ -19,7 +19,8 @@ from pipeline.tuning.types import Criteria
 pytestmark = pytest.mark.bench
 
 NOISE = 0.01
-#: How far the true phase margin may lie off the one said [degrees]: below it in 5 % of the logs, either way in 10 %.
+#: How far the true phase margin may lie off the one said [degrees]: below it in 5 % of the logs,
+#: either way in 10 %.
 BELOW = {"PI": 2.0, "PID": 4.0}
 AWAY = {"PI": 2.0, "PID": 5.0}
 
@@ -64,7 +65,8 @@ def test_settings_keep_their_word_on_the_true_process(fits, kind):
     n = len(fits)
     print(
         f"\n{kind}: below by {BELOW[kind]:g}: {np.sum(e < -BELOW[kind])}, away by {AWAY[kind]:g}: "
-        f"{np.sum(np.abs(e) > AWAY[kind])}, overshoot off by 2: {np.sum(np.abs(o) > 2.0)}, unstable {lost}, of {n}; "
+        f"{np.sum(np.abs(e) > AWAY[kind])}, overshoot off by 2: {np.sum(np.abs(o) > 2.0)}, "
+        f"unstable {lost}, of {n}; "
         f"90th percentile of |error| {np.percentile(np.abs(e), 90):.2f} degrees, of |overshoot| "
         f"{np.percentile(np.abs(o), 90):.2f} points; integral gain over the best: median {np.median(v):.3f}, "
         f"5th percentile {np.percentile(v, 5):.3f}, 95th {np.percentile(v, 95):.3f}"

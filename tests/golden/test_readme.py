@@ -5,7 +5,7 @@ from pathlib import Path
 from pipeline.commission import Request, commission
 from pipeline.report.outline import build_outline
 from pipeline.report.terminal import summary_text
-from pipeline.settings import load_sheet
+from pipeline.sheetfile import load_sheet
 
 ROOT = Path(__file__).parents[2]
 LOG = ROOT / "demo_logs" / "tunnel_air_temperature.csv"

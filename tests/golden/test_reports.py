@@ -8,7 +8,7 @@ import pytest
 
 from pipeline.commission import Request, commission
 from pipeline.record import to_json
-from pipeline.settings import load_sheet
+from pipeline.sheetfile import load_sheet
 
 ROOT = Path(__file__).parents[2]
 LOGS = sorted((ROOT / "demo_logs").glob("*.csv"))

@@ -92,6 +92,7 @@ def test_sensitivity_bounds_the_margins_and_both_domains_agree(loop):
             "repeats per second",
             "gain per second",
             "gain per minute",
+            "gain per scan",
         ]
     ),
     st.sampled_from(["seconds", "minutes", "gain in seconds", "gain in minutes"]),
@@ -108,6 +109,7 @@ def test_entry_comes_back_the_same(equation, proportional, basis, integral, deri
         derivative=derivative,
         pv_span=250.0,
         co_span=100.0,
+        scan=0.2,
     )
     c = Controller(kind="PID", gain=gain, action="reverse", integral_time=ti, derivative_time=share * ti)
     assert understand(enter(c, entry), entry) == pytest.approx((gain, ti, share * ti), rel=1e-9)

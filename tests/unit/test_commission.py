@@ -12,7 +12,8 @@ from pipeline.cautions import RULES, Facts, cautions
 from pipeline.commission import Request, commission, inspect
 from pipeline.findings import Caution
 from pipeline.record import to_json
-from pipeline.settings import LoopSheet, load_sheet
+from pipeline.settings import LoopSheet
+from pipeline.sheetfile import load_sheet
 from pipeline.tuning.recommend import recommend, wanted
 
 DEMO = Path(__file__).parents[2] / "demo_logs"
@@ -41,7 +42,8 @@ def test_the_phase_margin_asked_is_the_one_reached_where_it_binds(target):
     record = tuned(phase_margin=target, overshoot=60.0, max_sensitivity=5.0, gain_margin=1.2)
     assert record.binding == "phase_margin"
     if record.backoff.factor == 1.0:
-        assert record.margins.phase_margin_deg == pytest.approx(target, abs=0.01)
+        # entered to four digits, rounded to the safe side
+        assert target - 0.01 <= record.margins.phase_margin_deg <= target + 0.05
 
 
 @pytest.mark.parametrize("kind", ["P", "I", "PI", "PD", "PID"])
@@ -139,7 +141,7 @@ def test_rival_structures_are_told_in_the_controllers_own_unit():
     record = tuned("hall_temperature_long_duct")
     assert record.controller.gain != pytest.approx(record.controller.gain_engineering)
     best = record.candidates[0]
-    assert best.gain_recommended * record.backoff.factor == pytest.approx(record.controller.gain)
+    assert best.gain_recommended * record.backoff.factor == pytest.approx(record.controller.gain, rel=2e-3)
 
 
 def test_what_the_back_off_has_to_say_reaches_the_reader():

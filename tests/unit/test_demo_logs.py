@@ -12,7 +12,7 @@ import numpy as np
 import pytest
 from scipy import signal
 
-from pipeline.settings import load_sheet
+from pipeline.sheetfile import load_sheet
 
 DEMO_LOGS = Path(__file__).parents[2] / "demo_logs"
 SCRIPT = DEMO_LOGS / "make_logs.py"

@@ -8,7 +8,8 @@ import pytest
 from pydantic import ValidationError
 
 from pipeline.errors import UsageError
-from pipeline.settings import LoopSheet, load_sheet
+from pipeline.settings import LoopSheet
+from pipeline.sheetfile import load_sheet
 
 
 def sheet(tmp_path: Path, text: str) -> LoopSheet:

@@ -9,7 +9,8 @@ import pytest
 from pipeline.bumps import find_bumps, find_moves
 from pipeline.findings import Caution
 from pipeline.intake import Column, Log, read_log
-from pipeline.settings import LoopSheet, load_sheet
+from pipeline.settings import LoopSheet
+from pipeline.sheetfile import load_sheet
 from pipeline.testquality import RULES, Quality, judge
 
 DATA = Path(__file__).parent.parent / "data"
