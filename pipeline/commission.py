@@ -6,15 +6,19 @@ from dataclasses import dataclass
 from datetime import UTC, datetime
 from typing import TYPE_CHECKING
 
+import numpy as np
+
 from fitters.choose import choose
 from pipeline import __version__, advice
 from pipeline.bumps import Bump, bump_data, find_bumps
 from pipeline.cautions import Facts, cautions
 from pipeline.intake import read_log
+from pipeline.loop.limited import LimitedStep, limited_step
 from pipeline.record import Made, Record, build, curves, parts
 from pipeline.settings import LoopSheet
 from pipeline.testquality import Quality, judge
 from pipeline.tuning.recommend import Recommended, Wanted, as_found, recommend, tune_model, wanted
+from pipeline.tuning.standing import stand
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -171,7 +175,15 @@ def _record(
     if choice is not None and made is not None and not _stopped(told):
         found = as_found(choice.best, sheet, asked, made.dead_time_floor)
         settings = build.settings(
-            made.tuning, made.backed_off, made.source, asked.entry, found, pv_unit, co_unit
+            made.tuning,
+            made.backed_off,
+            made.source,
+            asked.entry,
+            found,
+            stand(made, asked),
+            _limited(seen, sheet, choice, made),
+            pv_unit,
+            co_unit,
         )
         steps = advice.after_settings(made.backed_off, seen.bumps, sheet, pv_unit or "PV units", choice.best)
     else:
@@ -194,6 +206,20 @@ def _record(
         shown=curves.series(seen.log, choice, pv_unit, co_unit),
         identified=identified,
         settings=settings,
+    )
+
+
+def _limited(seen: Inspection, sheet: LoopSheet, choice: Choice, made: Recommended) -> LimitedStep | None:
+    """Step the set point as far as the PV moved in the test, where that would meet the output's limits."""
+    low, high = sheet.co_limits()
+    stands_at, step = float(seen.log.co[-1]), float(np.ptp(choice.best.fitted))
+    room_low, room_high = min(low - stands_at, 0.0), max(high - stands_at, 0.0)
+    prediction = made.backed_off.prediction
+    moves = step * prediction.setpoint.co
+    if step == 0.0 or (float(np.min(moves)) >= room_low and float(np.max(moves)) <= room_high):
+        return None
+    return limited_step(
+        made.tuning.model, made.backed_off.controller, size=step, low=room_low, high=room_high
     )
 
 

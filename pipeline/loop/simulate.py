@@ -10,7 +10,7 @@ from scipy.signal import lfilter
 
 from pipeline.errors import UsageError
 from pipeline.loop.controller import extra_dead_time, feedback_path, product, setpoint_path, sign
-from pipeline.loop.metrics import final_value, integral_value, measure, noise_gain
+from pipeline.loop.metrics import StepNumbers, final_value, integral_value, measure, noise_gain
 from pipeline.loop.stack import stack_loops
 from pipeline.loop.stepping import Recursion, closed_loop, spectral_radius
 from pipeline.loop.sweep import Grid, frequency_grid
@@ -172,8 +172,8 @@ def predict(model: ProcessModel, controller: Controller) -> Prediction:
     )
 
 
-def overshoot(model: ProcessModel, controller: Controller) -> float:
-    """Give only the overshoot of `predict` [%], several times faster.
+def step_numbers(model: ProcessModel, controller: Controller) -> StepNumbers:
+    """Give only what a set-point step is measured by, several times faster than `predict`.
 
     Parameters
     ----------
@@ -183,9 +183,19 @@ def overshoot(model: ProcessModel, controller: Controller) -> float:
     plan = _plan(model, controller)
     to_sp = _ratio(model, setpoint_path(controller))
     sp = closed_loop(plan.loop, to_sp, delay=plan.delay, h=plan.h).run(plan.n)
-    return measure(
-        plan.delay + plan.h * np.arange(sp.size, dtype=float), sp, final_value(to_sp, plan.loop)
-    ).overshoot
+    t = plan.delay + plan.h * np.arange(sp.size, dtype=float)
+    return measure(t, sp, final_value(to_sp, plan.loop))
+
+
+def overshoot(model: ProcessModel, controller: Controller) -> float:
+    """Give only the overshoot of a set-point step [%].
+
+    Parameters
+    ----------
+    model : ProcessModel
+    controller : Controller
+    """
+    return step_numbers(model, controller).overshoot
 
 
 def stable_in_time(model: ProcessModel, controller: Controller) -> bool:

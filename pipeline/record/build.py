@@ -22,6 +22,8 @@ from pipeline.record.schema import (
     Record,
     Series,
 )
+from pipeline.record.standing import MarginGuide, Standing
+from pipeline.record.stands import guide_info, standing_info
 
 if TYPE_CHECKING:
     from collections.abc import Mapping, Sequence
@@ -29,8 +31,10 @@ if TYPE_CHECKING:
     from fitters.fit import Choice
     from pipeline.findings import Caution
     from pipeline.loop import forms
+    from pipeline.loop.limited import LimitedStep
     from pipeline.loop.types import Margins
     from pipeline.settings import LoopSheet
+    from pipeline.tuning import standing
     from pipeline.tuning.types import BackedOff, Criteria, Tuning
 
 
@@ -66,6 +70,8 @@ class Settings:
     source : str
         Source of uncertainty that ruled the back-off.
     as_found : AsFound or None
+    guide : MarginGuide
+    standing : Standing
     """
 
     controller: ControllerInfo
@@ -73,6 +79,8 @@ class Settings:
     binding: str
     source: str
     as_found: AsFound | None
+    guide: MarginGuide
+    standing: Standing
 
 
 def identified(choice: Choice, gains: Mapping[str, float], pv_unit: str, co_unit: str) -> Identified:
@@ -99,6 +107,8 @@ def settings(
     source: str,
     entry: forms.Entry,
     found: tuple[forms.Entered, Margins, float | None] | None,
+    stands: standing.Standing,
+    limited: LimitedStep | None,
     pv_unit: str | None,
     co_unit: str | None,
 ) -> Settings:
@@ -114,6 +124,10 @@ def settings(
         How the controller takes its settings.
     found : tuple of (Entered, Margins, float or None) or None
         Settings found in the controller, their margins and overshoot.
+    stands : pipeline.tuning.standing.Standing
+        Where the settings stand.
+    limited : LimitedStep or None
+        A set-point step through the output's limits.
     pv_unit, co_unit : str or None
     """
     as_found = None
@@ -130,6 +144,8 @@ def settings(
         binding=tuning.binding,
         source=source,
         as_found=as_found,
+        guide=guide_info(stands.guide, entry),
+        standing=standing_info(stands, limited, entry),
     )
 
 
@@ -186,6 +202,8 @@ def assemble(
             "margins": parts.margins_info(settings.backed_off.margins),
             "prediction": curves.prediction_info(settings.backed_off.prediction, settings.backed_off.bands),
             "bands": parts.bands_info(settings.backed_off.bands),
+            "margin_guide": settings.guide,
+            "standing": settings.standing,
             "as_found": settings.as_found,
         }
     return Record(

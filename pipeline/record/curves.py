@@ -28,12 +28,12 @@ def prediction_info(prediction: Prediction, bands: Bands | None) -> PredictionIn
         Band of the set-point step.
     """
     setpoint = prediction.setpoint
-    t, pv, co = _thin_trajectory(setpoint)
+    t, pv, co = thin_trajectory(setpoint)
     low = high = None
     if bands is not None:
         low = np.interp(t, bands.t, bands.low)
         high = np.interp(t, bands.t, bands.high)
-    load_t, load_pv, load_co = _thin_trajectory(prediction.load)
+    load_t, load_pv, load_co = thin_trajectory(prediction.load)
     return PredictionInfo(
         overshoot_pct=prediction.overshoot,
         rise_s=prediction.rise_time,
@@ -75,9 +75,15 @@ def series(log: Log, choice: Choice | None, pv_unit: str | None, co_unit: str | 
     )
 
 
-def _thin_trajectory(
+def thin_trajectory(
     trajectory: Trajectory,
 ) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
+    """Give t, PV and CO of a response, thinned to what a figure can show.
+
+    Parameters
+    ----------
+    trajectory : Trajectory
+    """
     count = trajectory.t.size
     if count <= RESPONSE_POINTS:
         return trajectory.t, trajectory.pv, trajectory.co

@@ -14,7 +14,8 @@ from typing import Any
 from pydantic import ValidationError
 
 from pipeline.errors import UsageError
-from pipeline.record.schema import RECORD_VERSION, Part, Record
+from pipeline.record.fields import Part
+from pipeline.record.schema import RECORD_VERSION, Record
 
 #: Digits kept of every number: beyond what any log supports, below where machines differ.
 SIGNIFICANT_DIGITS = 12

@@ -7,72 +7,16 @@ place in a record.
 
 from __future__ import annotations
 
-import math
-from typing import Annotated, Literal, Self
+from typing import Literal, Self
 
-from pydantic import (
-    BaseModel,
-    BeforeValidator,
-    ConfigDict,
-    Field,
-    JsonValue,
-    model_validator,
-)
+from pydantic import Field, JsonValue, model_validator
 
 from pipeline.findings import Level
+from pipeline.record.fields import GappyNumbers, LowerEnd, Number, Numbers, Part, Percentiles
+from pipeline.record.standing import MarginGuide, Standing
 
 #: Raised when a key changes its name or meaning; older files then need their own reader.
 RECORD_VERSION: Literal[1] = 1
-
-
-def _number(value: object) -> object:
-    """Take an int, a float, any numpy real or the string "inf"; refuse NaN and minus infinity."""
-    if isinstance(value, str):
-        if value == "inf":
-            return math.inf
-        raise ValueError('a number or "inf" belongs here')
-    if isinstance(value, bool):
-        raise ValueError("a number belongs here, not true or false")
-    try:
-        number = float(value)  # type: ignore[arg-type]
-    except (TypeError, ValueError):
-        raise ValueError("a number belongs here") from None
-    if math.isnan(number) or number == -math.inf:
-        raise ValueError("NaN and minus infinity are never recorded")
-    return number
-
-
-def _lower_end(value: object) -> object:
-    """Take what `_number` takes, and minus infinity: an interval may have no lower end."""
-    if value == "-inf" or (isinstance(value, float) and value == -math.inf):
-        return -math.inf
-    return _number(value)
-
-
-def _plain_sequence(values: object) -> object:
-    """Turn an array into plain numbers before they are looked at one by one."""
-    return values.tolist() if hasattr(values, "tolist") else values
-
-
-def _gappy_sequence(values: object) -> object:
-    """Turn an array into plain numbers, with None where it holds NaN."""
-    plain = _plain_sequence(values)
-    if not isinstance(plain, (list, tuple)):
-        return plain
-    return [None if isinstance(v, float) and math.isnan(v) else v for v in plain]
-
-
-Number = Annotated[float, BeforeValidator(_number)]
-LowerEnd = Annotated[float, BeforeValidator(_lower_end)]
-Numbers = Annotated[tuple[Number, ...], BeforeValidator(_plain_sequence)]
-GappyNumbers = Annotated[tuple[Number | None, ...], BeforeValidator(_gappy_sequence)]
-Percentiles = Annotated[tuple[Number, Number, Number], BeforeValidator(_plain_sequence)]
-
-
-class Part(BaseModel):
-    """Common ground: read-only, and a key nobody knows is an error."""
-
-    model_config = ConfigDict(frozen=True, extra="forbid", populate_by_name=True)
 
 
 class Made(Part):
@@ -299,24 +243,6 @@ class BandsInfo(Part):
     unstable_share: Number
 
 
-class GuidePoint(Part):
-    """What one phase margin comes with on this process."""
-
-    phase_margin_deg: Number
-    gain: Number
-    overshoot_pct: Number
-    gain_margin: Number
-    max_sensitivity: Number
-
-
-class MarginGuide(Part):
-    """Whether the phase margin predicts the overshoot here, and the curve that shows it."""
-
-    holds: bool
-    why: str
-    curve: tuple[GuidePoint, ...]
-
-
 class AsFound(Part):
     """The settings found in the controller, and what they mean on this model."""
 
@@ -367,6 +293,7 @@ class Record(Part):
     prediction: PredictionInfo | None = None
     bands: BandsInfo | None = None
     margin_guide: MarginGuide | None = None
+    standing: Standing | None = None
     as_found: AsFound | None = None
     cautions: tuple[CautionInfo, ...]
     next_steps: tuple[str, ...]

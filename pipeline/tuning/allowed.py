@@ -12,18 +12,14 @@ from pipeline.loop.stack import stack_loops
 from pipeline.loop.sweep import Grid
 from pipeline.tuning.criteria import NAMES, gain_range
 from pipeline.tuning.simulated import gain_within
-from pipeline.tuning.types import Criteria
+from pipeline.tuning.types import NO_CRITERIA
 
 if TYPE_CHECKING:
-    from pipeline.tuning.types import Tuning
+    from pipeline.tuning.types import Criteria, Tuning
 
 _GRID = Grid(per_decade=80, floor=0.02)
 #: Criteria only a simulation can judge.
 _SIMULATED = ("overshoot", "co_peak")
-#: No criterion at all.
-_NONE = Criteria(
-    phase_margin=None, gain_margin=None, max_sensitivity=None, overshoot=None, percentile_phase_margin=None
-)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -55,7 +51,7 @@ def allowed_gains(tuning: Tuning, criteria: Criteria) -> tuple[Allowed, ...]:
         asked = getattr(criteria, name)
         if asked is None:
             continue
-        only = replace(_NONE, **{name: asked})
+        only = replace(NO_CRITERIA, **{name: asked})
         gain = _simulated(tuning, only) if name in _SIMULATED else _by_frequency(tuning, only)
         out.append(Allowed(criterion=name, gain=gain))
     return tuple(out)
@@ -71,7 +67,7 @@ def _by_frequency(tuning: Tuning, only: Criteria) -> float | None:
 def _simulated(tuning: Tuning, only: Criteria) -> float | None:
     """Follow the criterion up to just below the stability limit, from there down."""
     c = tuning.controller
-    limit = gain_range(stack_loops([tuning.model], [c]), _NONE, _GRID, exact=True)
+    limit = gain_range(stack_loops([tuning.model], [c]), NO_CRITERIA, _GRID, exact=True)
     top = float(limit.high[0])
     if not np.isfinite(top):
         return None

@@ -7,17 +7,21 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from pipeline.loop.margins import margins
-from pipeline.loop.simulate import predict
+from pipeline.loop.margins import margin_table, margins
+from pipeline.loop.search import roots
+from pipeline.loop.simulate import step_numbers
 from pipeline.loop.stack import stack_loops
-from pipeline.loop.sweep import Grid
-from pipeline.tuning.criteria import NAMES, gain_range
+from pipeline.loop.sweep import Grid, Sweep, frequency_grid, gain_crossings, past_at, sweep
 from pipeline.tuning.simulated import gain_within
 from pipeline.tuning.types import Criteria
 
 if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
     from fitters.process import ProcessModel
     from pipeline.loop.types import Controller
+
+    Reals = NDArray[np.float64]
 
 #: Phase margins of the curve [degrees].
 _CURVE = np.arange(30.0, 81.0, 5.0)
@@ -38,6 +42,8 @@ _DOMINANT = 1.0
 #: Skogestad (2003), J. Process Control 13, 291-309, takes 8 at a closed-loop time of one dead time.
 _SHORT_INTEGRAL = 14.25
 _GRID = Grid(per_decade=80, floor=0.02)
+#: A gain has the phase margin wanted if no other crossover is nearer [degrees].
+_MET = 0.01
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -114,7 +120,7 @@ def margin_guide(
     MarginGuide
         The curve follows the uppermost, fast branch of gains.
     """
-    found = {pm: _point(model, controller, float(pm)) for pm in _CURVE}
+    found = _points(model, controller)
     curve = tuple(p for p in found.values() if p is not None)
     usual, lower = found[_USUAL], found[_LOWER]
     doubts = _doubts(usual, lower)
@@ -141,22 +147,57 @@ def margin_guide(
     )
 
 
-def _point(model: ProcessModel, controller: Controller, phase_margin: float) -> GuidePoint | None:
-    only = Criteria(phase_margin=phase_margin, gain_margin=None, max_sensitivity=None, overshoot=None)
-    r = gain_range(stack_loops([model], [controller]), only, _GRID, exact=True)
-    if not np.isfinite(r.high[0]) or NAMES[int(r.high_by[0])] != "phase_margin":
-        return None
-    there = replace(controller, gain=controller.gain * float(r.high[0]))
-    m, p = margins(model, there), predict(model, there)
-    return GuidePoint(
-        phase_margin=phase_margin,
-        gain=there.gain,
-        overshoot=p.overshoot,
-        gain_margin=m.gain_margin,
-        max_sensitivity=m.max_sensitivity,
-        settling_time=p.settling_time,
-        crossings=sum(c.kind == "gain" for c in m.crossings),
+def _points(model: ProcessModel, controller: Controller) -> dict[float, GuidePoint | None]:
+    """Find the fastest gain for every margin of the curve: all candidates from one sweep, judged at once."""
+    loop = stack_loops([model], [controller])
+    s = sweep(loop, frequency_grid(loop, _GRID))
+    wanted, gains = _candidates(s)
+    found: dict[float, GuidePoint | None] = dict.fromkeys(_CURVE.tolist())
+    if gains.size == 0:
+        return found
+    row = np.zeros(gains.size, dtype=np.intp)
+    loops = loop.scaled(gains, row)
+    table = margin_table(loops)
+    crossings = np.bincount(
+        gain_crossings(sweep(loops, frequency_grid(loops, _GRID))).row, minlength=gains.size
     )
+    good = table.stable & (np.abs(table.phase_margin - wanted) < _MET)
+    for k in np.flatnonzero(good)[np.argsort(gains[good])]:
+        there = replace(controller, gain=controller.gain * float(gains[k]))
+        found[float(wanted[k])] = GuidePoint(
+            phase_margin=float(wanted[k]),
+            gain=there.gain,
+            overshoot=np.nan,
+            gain_margin=float(table.gain_margin[k]),
+            max_sensitivity=float(table.max_sensitivity[k]),
+            settling_time=np.nan,
+            crossings=int(crossings[k]),
+        )
+    for margin, point in found.items():
+        if point is not None:
+            step = step_numbers(model, replace(controller, gain=point.gain))
+            found[margin] = replace(point, overshoot=step.overshoot, settling_time=step.settling_time)
+    return found
+
+
+def _candidates(s: Sweep) -> tuple[Reals, Reals]:
+    """Give each margin wanted and a gain that puts a crossover where the phase is just that."""
+    x = np.log(s.omega)
+    wanted, low, high = [], [], []
+    for margin in _CURVE:
+        short = np.abs(s.past[0]) - np.radians(margin)
+        k = np.flatnonzero((short[:-1] * short[1:] < 0.0) & s.resolved)
+        wanted.append(np.full(k.size, margin))
+        low.append(x[k])
+        high.append(x[k + 1])
+    asked = np.concatenate(wanted)
+    rows = np.zeros(asked.size, dtype=np.intp)
+    at = roots(
+        lambda z, i: np.abs(past_at(s.loops, np.exp(z), rows[i])) - np.radians(asked[i]),
+        np.concatenate(low),
+        np.concatenate(high),
+    )
+    return asked, 1.0 / np.abs(s.loops.response(np.exp(at), rows))
 
 
 def _for_overshoot(model: ProcessModel, top: Controller, overshoot: float) -> float | None:

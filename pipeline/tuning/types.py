@@ -57,6 +57,12 @@ class Criteria:
     percentile_phase_margin: float | None = 45.0
 
 
+#: Nothing asked: all that is left is stability.
+NO_CRITERIA = Criteria(
+    phase_margin=None, gain_margin=None, max_sensitivity=None, overshoot=None, percentile_phase_margin=None
+)
+
+
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Tuning:
     """Settings on the nominal model and what decided them.

@@ -7,13 +7,13 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from pipeline.loop.margins import margin_table, margins
+from pipeline.loop.margins import margin_table
 from pipeline.loop.simulate import overshoot
 from pipeline.loop.stack import stack_loops
 
 if TYPE_CHECKING:
     from fitters.process import ProcessModel
-    from pipeline.loop.types import Controller, Margins
+    from pipeline.loop.types import Controller
 
 #: What is tried: name, factors on gain, on lags and on dead time [1]. A fifth of gain, a third of the
 #: lags and half of the dead time are changes that throughput, product and wear bring (common practice).
@@ -26,7 +26,7 @@ CHANGES = (
     ("gain +20 %, lags -30 %, dead time +50 %", 1.2, 0.7, 1.5),
 )
 #: Largest common growth of gain and dead time looked at [1], and gains tried at once.
-_MOST_GROWTH, _AT_ONCE = 100.0, 40
+_MOST_GROWTH, _AT_ONCE = 100.0, 16
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -36,14 +36,20 @@ class WhatIf:
     Attributes
     ----------
     change : str
-    margins : Margins
-        Of the same settings on the changed process.
+    stable : bool
+    phase_margin : float
+        Of the same settings on the changed process [degrees].
+    gain_margin, max_sensitivity : float
+        [1].
     overshoot : float or None
         [%]; None where the loop is lost.
     """
 
     change: str
-    margins: Margins
+    stable: bool
+    phase_margin: float
+    gain_margin: float
+    max_sensitivity: float
     overshoot: float | None
 
 
@@ -55,13 +61,19 @@ def what_if(model: ProcessModel, controller: Controller) -> tuple[WhatIf, ...]:
     model : ProcessModel
     controller : Controller
     """
-    out = []
-    for change, gain, lags, dead_time in CHANGES:
-        changed = model.scaled(gain, lags, dead_time)
-        m = margins(changed, controller)
-        over = overshoot(changed, controller) if m.stable else None
-        out.append(WhatIf(change=change, margins=m, overshoot=over))
-    return tuple(out)
+    changed = [model.scaled(*factors) for _, *factors in CHANGES]
+    table = margin_table(stack_loops(changed, [controller]))
+    return tuple(
+        WhatIf(
+            change=change[0],
+            stable=bool(table.stable[k]),
+            phase_margin=float(table.phase_margin[k]),
+            gain_margin=float(table.gain_margin[k]),
+            max_sensitivity=float(table.max_sensitivity[k]),
+            overshoot=overshoot(changed[k], controller) if table.stable[k] else None,
+        )
+        for k, change in enumerate(CHANGES)
+    )
 
 
 def growth_borne(model: ProcessModel, controller: Controller) -> float:
