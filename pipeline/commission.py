@@ -18,7 +18,7 @@ from pipeline.record import Made, Record, build, curves, parts
 from pipeline.settings import LoopSheet
 from pipeline.testquality import Quality, judge
 from pipeline.tuning.recommend import Recommended, Wanted, as_found, recommend, tune_model, wanted
-from pipeline.tuning.standing import stand
+from pipeline.tuning.standing import Standing, stand
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -126,12 +126,14 @@ def commission(path: Path, *, request: Request) -> Record:
     seen = inspect(path, request=request)
     choice: Choice | None = None
     recommended: Recommended | None = None
+    stands: Standing | None = None
     if seen.quality.verdict != "do not use":
         low, high = sheet.co_limits()
         choice = choose(bump_data(seen.log, seen.bumps, co_low=low, co_high=high))
-        if not _stopped(cautions(_facts(seen, sheet, asked, choice, None, {}))):
+        if not _stopped(cautions(_facts(seen, sheet, asked, choice))):
             recommended = recommend(choice, asked, log_interval=seen.log.interval)
-    return _record(seen, sheet, asked, choice, recommended)
+            stands = stand(recommended, asked)
+    return _record(seen, sheet, asked, choice, recommended, stands)
 
 
 def _facts(
@@ -139,8 +141,9 @@ def _facts(
     sheet: LoopSheet,
     asked: Wanted,
     choice: Choice | None,
-    made: Recommended | None,
-    gains: dict[str, float],
+    made: Recommended | None = None,
+    stands: Standing | None = None,
+    gains: dict[str, float] | None = None,
 ) -> Facts:
     return Facts(
         log=seen.log,
@@ -151,7 +154,8 @@ def _facts(
         tuning=None if made is None else made.tuning,
         backed_off=None if made is None else made.backed_off,
         dead_time_floor=0.0 if made is None else made.dead_time_floor,
-        structure_gains=gains,
+        structure_gains=gains or {},
+        standing=stands,
     )
 
 
@@ -165,14 +169,15 @@ def _record(
     asked: Wanted,
     choice: Choice | None,
     made: Recommended | None,
+    stands: Standing | None,
 ) -> Record:
     """Write down what was found; settings only where nothing stops them."""
     gains = {} if choice is None else _structure_gains(choice, asked, made)
-    told = cautions(_facts(seen, sheet, asked, choice, made, gains))
+    told = cautions(_facts(seen, sheet, asked, choice, made, stands, gains))
     pv_unit = sheet.pv.unit or seen.log.pv_column.unit
     co_unit = sheet.co.unit or seen.log.co_column.unit
     settings = None
-    if choice is not None and made is not None and not _stopped(told):
+    if choice is not None and made is not None and stands is not None and not _stopped(told):
         found = as_found(choice.best, sheet, asked, made.dead_time_floor)
         settings = build.settings(
             made.tuning,
@@ -180,7 +185,7 @@ def _record(
             made.source,
             asked.entry,
             found,
-            stand(made, asked),
+            stands,
             _limited(seen, sheet, choice, made),
             pv_unit,
             co_unit,

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 
-from pipeline.cautions import general, process, settings, structure
+from pipeline.cautions import general, guide, process, settings, structure
 from pipeline.cautions.facts import Facts
 from pipeline.findings import Caution, worst_first
 
@@ -28,10 +28,14 @@ RULES: tuple[Callable[[Facts], Caution | None], ...] = (
     process.wrong_way_first,
     process.rings,
     settings.no_integral_action,
+    guide.phase_margin_misleads,
+    guide.faster_than_process,
+    guide.asked_faster_than_dead_time,
     settings.lower_limit,
     settings.criteria_not_met,
     settings.output_kick,
     settings.noisy_output,
+    guide.entry_step_coarse,
     process.dead_time_floored,
     process.coarse_clock,
     structure.not_settled,

@@ -12,6 +12,7 @@ if TYPE_CHECKING:
     from pipeline.intake.log import Log
     from pipeline.settings import LoopSheet
     from pipeline.testquality import Quality
+    from pipeline.tuning.standing import Standing
     from pipeline.tuning.types import BackedOff, Criteria, Tuning
 
 
@@ -32,6 +33,7 @@ class Facts:
         Dead time assumed at least [s].
     structure_gains : dict of str to float
         Controller gain that each believable structure leads to before any back-off.
+    standing : Standing or None
     """
 
     log: Log
@@ -43,6 +45,7 @@ class Facts:
     backed_off: BackedOff | None
     dead_time_floor: float
     structure_gains: dict[str, float]
+    standing: Standing | None = None
 
 
 def process_gain(fit: Fit) -> Parameter:

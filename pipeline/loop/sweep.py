@@ -51,8 +51,8 @@ class Sweep:
         ln |L|.
     past : (m, n) ndarray
         Angle of -L in (-pi, pi]: the phase beyond -180 degrees, the phase margin where |L| is one [rad].
-    resolved : (n - 1,) ndarray of bool
-        Intervals in which the dead time turns little enough to be followed.
+    resolved : (m, n - 1) ndarray of bool
+        Intervals in which each loop's dead time turns little enough to be followed.
     """
 
     loops: LoopStack
@@ -138,8 +138,13 @@ def frequency_grid(loops: LoopStack, grid: Grid) -> Reals:
         bare = np.abs(_bare(loops, pick, omega)).max(axis=0)
         audible = np.flatnonzero(bare > grid.floor)
         shortest = float(loops.delay[loops.delay > 0.0].min())
-        top = max(omega[audible[-1]] if audible.size else 0.0, ALWAYS_FOLLOWED / shortest)
+        top = max(omega[audible[-1]] if audible.size else 0.0, ALWAYS_FOLLOWED / delay)
         start = _TURN / delay
+        if ALWAYS_FOLLOWED / shortest > top:
+            # Shorter dead times turn later: these steps follow each through its first four turns.
+            steps = np.log(ALWAYS_FOLLOWED / shortest / top) * ALWAYS_FOLLOWED / (2.0 * _TURN)
+            later = np.geomspace(top, ALWAYS_FOLLOWED / shortest, int(min(steps, _MOST_LINEAR)) + 2)
+            omega = np.union1d(omega, later)
         count = int(min((top - start) * delay / _TURN, _MOST_LINEAR))
         if count > 1:
             omega = np.union1d(omega, start + _TURN / delay * np.arange(count))
@@ -184,7 +189,6 @@ def sweep(loops: LoopStack, omega: Reals) -> Sweep:
     with np.errstate(divide="ignore"):
         log_gain = np.log(np.abs(top)) - np.log(np.abs(bottom))
     past = np.angle(-_moderate(top) * _moderate(bottom).conj())
-    delay = float(loops.delay.max(initial=0.0))
     return Sweep(
         loops=loops,
         omega=omega,
@@ -192,7 +196,7 @@ def sweep(loops: LoopStack, omega: Reals) -> Sweep:
         bottom=bottom,
         log_gain=log_gain,
         past=past,
-        resolved=np.diff(omega) * delay < 4.0 * _TURN,
+        resolved=np.diff(omega)[None, :] * loops.delay[:, None] < 4.0 * _TURN,
     )
 
 
@@ -242,7 +246,7 @@ def past_at(loops: LoopStack, omega: Reals, rows: Rows) -> Reals:
 
 def gain_crossings(s: Sweep) -> Crossings:
     """Find every frequency where |L| is one, near misses of the grid included."""
-    return _crossings(s, s.log_gain, log_gain_at, np.ones(s.omega.size - 1, dtype=bool))
+    return _crossings(s, s.log_gain, log_gain_at, np.ones((1, s.omega.size - 1), dtype=bool))
 
 
 def phase_crossings(s: Sweep) -> Crossings:
@@ -264,7 +268,7 @@ def _crossings(s: Sweep, value: Reals, f: object, valid: NDArray[np.bool_]) -> C
         dip = ((up > 0) & (down > 0) & (mid < 0) & (mid > -_NEAR)) | (
             (up < 0) & (down < 0) & (mid > 0) & (mid < _NEAR)
         )
-        dip &= valid[:-1] & valid[1:]
+        dip &= valid[:, :-1] & valid[:, 1:]
     row, k = np.nonzero(flips)
     lo, hi = x[k], x[k + 1]
     drow, dk = np.nonzero(dip)
@@ -323,7 +327,7 @@ def unstable_roots(s: Sweep) -> NDArray[np.float64]:
     end = np.where(loud.any(axis=1), np.minimum(last + 1, n - 1), 0)
     end = np.where(late, end, n - 1)
     # Loud beyond where the dead time is followed, hundreds of turns up: far past any stability.
-    followed = int(np.argmin(s.resolved)) if not s.resolved.all() else n - 1
+    followed = np.where(s.resolved.all(axis=1), n - 1, np.argmin(s.resolved, axis=1))
     runaway = late & ((end > followed) | (direct >= 1.0))
     counted = (np.arange(n - 1)[None, :] < end[:, None]) & ~runaway[:, None]
     lost = _refine(s, step, counted) | runaway

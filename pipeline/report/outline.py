@@ -35,6 +35,7 @@ from pipeline.report.performance import (
     prediction,
     settled,
 )
+from pipeline.report.standing import guide, standing
 
 _HEADLINES = {
     "ready": "Settings are ready to enter.",
@@ -265,6 +266,8 @@ _WITH_SETTINGS: tuple[Callable[[Record], Section | None], ...] = (
     _next_steps,
     prediction,
     loop,
+    guide,
+    standing,
     test,
     model,
     _in_full,

@@ -4,14 +4,20 @@ from __future__ import annotations
 
 import math
 
-from pipeline.record import PredictionInfo, Record
+from pipeline.record import LimitedInfo, PredictionInfo, Record
 from pipeline.report import numbers
 from pipeline.report.content import Block, Fact, Facts, Picture, Prose, Section, Table
 
-_CRITERIA = {
+#: Criteria as they are said in a sentence.
+CRITERIA = {
     "phase_margin": "the phase margin",
     "gain_margin": "the gain margin",
     "max_sensitivity": "the maximum sensitivity",
+    "max_complementary": "the peak of the complementary sensitivity",
+    "closed_loop_time": "the closed-loop time constant",
+    "crossover": "how far up the log knows the process",
+    "noise_gain": "the noise on the output",
+    "co_peak": "the peak of the output",
     "overshoot": "the overshoot",
     "percentile_phase_margin": "the phase margin at the edge of the plausible processes",
 }
@@ -116,7 +122,7 @@ def _with(text: str, unit: str) -> str:
 
 def _what_bound(record: Record) -> str:
     name = record.binding or ""
-    criterion = _CRITERIA.get(name, name.replace("_", " "))
+    criterion = CRITERIA.get(name, name.replace("_", " "))
     said = f"The gain was set by {criterion}." if criterion else "No single criterion set the gain."
     if record.backoff is None or record.backoff.factor >= 1.0:
         return f"{said} It was not reduced for uncertainty."
@@ -218,7 +224,20 @@ def prediction(record: Record) -> Section | None:
         ),
         Prose(text="The prediction is of a linear model without limits, sticking or noise."),
     ]
+    if record.standing is not None and record.standing.limited is not None:
+        blocks.insert(1, Prose(text=_through_limits(record.standing.limited, pv, co)))
     return Section(key="prediction", title="Predicted response", blocks=tuple(blocks))
+
+
+def _through_limits(step: LimitedInfo, pv: str, co: str) -> str:
+    """Say what the output's limits make of a step as large as the test's."""
+    return (
+        f"A set-point step of {numbers.plain(step.step, unit=pv)}, as far as the PV moved in the test, meets the "
+        f"limits of the output (room from {numbers.plain(step.co_room_low)} to "
+        f"{numbers.plain(step.co_room_high, unit=co)}) "
+        f"for {numbers.duration(step.limited_s, digits=_TIME_DIGITS)}; with an integral term that stops there the "
+        f"overshoot is {numbers.percent(step.overshoot_pct)}."
+    )
 
 
 def settled(p: PredictionInfo) -> str:

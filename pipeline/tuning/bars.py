@@ -176,27 +176,21 @@ def peak_bars(s: Sweep, limit: float | None, exact: bool, *, complementary: bool
     return rows.astype(np.intp), lo, hi
 
 
-def speed_bars(s: Sweep, limit: float | None) -> Bars:
-    """Forbid gains that make the closed loop faster than asked.
+def speed_bars(s: Sweep, most: float | Reals | None) -> Bars:
+    """Forbid gains with which the loop crosses over too high.
 
     Parameters
     ----------
     s : Sweep
         Of loops at gain one.
-    limit : float or None
-        Closed-loop time constant to keep at least [s].
-
-    Notes
-    -----
-    The gain crossover may not pass 1 / (limit + dead time): so a loop that is an integrator
-    and a dead time has just this time constant, as Skogestad (2003), J. Process Control 13,
-    291-309, asks of one.
+    most : float, (m,) ndarray or None
+        Highest gain crossover [rad/s].
     """
-    if limit is None:
+    if most is None:
         return no_bars()
     rows = np.arange(len(s.loops))
-    top = 1.0 / (limit + s.loops.delay)
-    return rows, -np.log(np.abs(s.loops.response(top, rows))), np.full(rows.size, FAR)
+    at = np.broadcast_to(np.asarray(most, dtype=float), rows.shape)
+    return rows, -np.log(np.abs(s.loops.response(at, rows))), np.full(rows.size, FAR)
 
 
 def noise_bars(noise: Reals, limit: float | None) -> Bars:

@@ -27,6 +27,7 @@ NAMES = (
     "max_sensitivity",
     "max_complementary",
     "closed_loop_time",
+    "crossover",
     "noise_gain",
 )
 #: Gains beyond this, up or down, are nobody's [ln gain].
@@ -94,7 +95,8 @@ def gain_range(
         bars.gain_bars(s, criteria),
         bars.peak_bars(s, criteria.max_sensitivity, exact),
         bars.peak_bars(s, criteria.max_complementary, exact, complementary=True),
-        bars.speed_bars(s, criteria.closed_loop_time),
+        bars.speed_bars(s, _fastest(loops, criteria.closed_loop_time)),
+        bars.speed_bars(s, criteria.crossover),
         bars.no_bars() if noise is None else bars.noise_bars(noise, criteria.noise_gain),
     ]
     rows, low, high = (np.concatenate([b[j] for b in forbidden]) for j in range(3))
@@ -128,7 +130,7 @@ def gain_range(
             bottom=s.bottom[at],
             log_gain=s.log_gain[at] + middle[:, None],
             past=s.past[at],
-            resolved=s.resolved,
+            resolved=s.resolved[at],
         )
     )
     stable = unstable_roots(tested) < 0.5
@@ -139,6 +141,15 @@ def gain_range(
             if g[0] <= -FAR:
                 found.low[i] = 0.0
     return found
+
+
+def _fastest(loops: LoopStack, closed_loop_time: float | None) -> Reals | None:
+    """Give the crossover at which a loop of an integrator and a dead time has that time constant.
+
+    Skogestad (2003), J. Process Control 13, 291-309, asks for such a loop: its crossover is at
+    1 / (closed-loop time constant + dead time).
+    """
+    return None if closed_loop_time is None else 1.0 / (closed_loop_time + loops.delay)
 
 
 def _gaps(low: Reals, high: Reals, kind: NDArray[np.int64]) -> list[tuple[float, float, int, int, float]]:

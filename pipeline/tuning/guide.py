@@ -186,7 +186,7 @@ def _candidates(s: Sweep) -> tuple[Reals, Reals]:
     wanted, low, high = [], [], []
     for margin in _CURVE:
         short = np.abs(s.past[0]) - np.radians(margin)
-        k = np.flatnonzero((short[:-1] * short[1:] < 0.0) & s.resolved)
+        k = np.flatnonzero((short[:-1] * short[1:] < 0.0) & s.resolved[0])
         wanted.append(np.full(k.size, margin))
         low.append(x[k])
         high.append(x[k + 1])

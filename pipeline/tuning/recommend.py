@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
+
+import numpy as np
 
 from fitters.spread import Floor, plausible
 from pipeline.loop.agreement import check_agreement
@@ -12,6 +14,7 @@ from pipeline.loop.margins import margins
 from pipeline.loop.simulate import overshoot
 from pipeline.loop.types import Controller
 from pipeline.tuning.duties import USUAL
+from pipeline.tuning.knowledge import known_until
 from pipeline.tuning.search import filter_time
 from pipeline.tuning.tuner import tune, with_floor
 from pipeline.tuning.types import Criteria
@@ -80,12 +83,15 @@ class Recommended:
         Effective dead time assumed at least [s].
     source : str
         What the plausible processes were drawn from: the widest source of doubt.
+    criteria : Criteria
+        What was asked, and how high the crossover may lie for what the log knows.
     """
 
     tuning: Tuning
     backed_off: BackedOff
     dead_time_floor: float
     source: str
+    criteria: Criteria
 
 
 def wanted(
@@ -193,18 +199,21 @@ def recommend(choice: Choice, asked: Wanted, *, log_interval: float) -> Recommen
         If frequency and time domain give different answers for the final loop.
     """
     floor = _UNSEEN_SHARE * log_interval
-    tuning = tune_model(choice.best.model, asked, dead_time_floor=floor)
-    kind = tuning.controller.kind
-    sources = {
-        name: [with_floor(model, kind, floor) for model in models]
-        for name, models in plausible(choice, asked.floor, PLAUSIBLE, _SEED).items()
-    }
+    kind = asked.kind or kind_for(choice.best.model)
+    drawn = plausible(choice, asked.floor, PLAUSIBLE, _SEED)
+    nominal = with_floor(choice.best.model, kind, floor)
+    until = min(known_until(models, nominal) for models in drawn.values())
+    within = replace(asked.criteria, crossover=until if np.isfinite(until) else None)
+    tuning = tune_model(choice.best.model, replace(asked, criteria=within), dead_time_floor=floor)
+    sources = {name: [with_floor(m, kind, floor) for m in models] for name, models in drawn.items()}
     percentile = asked.criteria.percentile
     worst = {n: held_phase_margin(m, tuning.controller, percentile) for n, m in sources.items()}
     source = min(worst, key=lambda name: worst[name])
     backed_off = back_off(tuning, sources[source], asked.criteria, asked.entry)
     check_agreement(tuning.model, backed_off.controller, backed_off.margins, backed_off.prediction)
-    return Recommended(tuning=tuning, backed_off=backed_off, dead_time_floor=floor, source=source)
+    return Recommended(
+        tuning=tuning, backed_off=backed_off, dead_time_floor=floor, source=source, criteria=within
+    )
 
 
 def tune_model(model: ProcessModel, asked: Wanted, *, dead_time_floor: float) -> Tuning:

@@ -121,4 +121,4 @@ def ultimate(model: ProcessModel) -> Ultimate | None:
     m = margins(model, Controller(kind="P", gain=0.5 * limit, action=p.action))
     if not np.isfinite(m.phase_crossover):
         return None
-    return Ultimate(gain=limit, period=2.0 * np.pi / m.phase_crossover)
+    return Ultimate(gain=0.5 * limit * m.gain_margin, period=2.0 * np.pi / m.phase_crossover)

@@ -54,7 +54,7 @@ def stand(made: Recommended, asked: Wanted) -> Standing:
     criteria = asked.criteria
     return Standing(
         guide=margin_guide(model, controller, overshoot=criteria.overshoot),
-        allowed=allowed_gains(made.tuning, criteria),
+        allowed=allowed_gains(made.tuning, made.criteria),
         what_if=what_if(model, controller),
         growth_borne=growth_borne(model, controller),
         limits=process_limits(model, controller, phase_margin=criteria.phase_margin or _USUAL_MARGIN),

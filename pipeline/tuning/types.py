@@ -32,6 +32,8 @@ class Criteria:
         At most this, above one [1].
     closed_loop_time : float or None
         Closed-loop time constant at least this [s].
+    crossover : float or None
+        Gain crossover at most this [rad/s]: how far up the log knows the process.
     overshoot : float or None
         At most this on a set-point step [%].
     noise_gain : float or None
@@ -50,6 +52,7 @@ class Criteria:
     max_sensitivity: float | None = 1.8
     max_complementary: float | None = None
     closed_loop_time: float | None = None
+    crossover: float | None = None
     overshoot: float | None = 10.0
     noise_gain: float | None = None
     co_peak: float | None = None

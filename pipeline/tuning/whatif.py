@@ -61,7 +61,9 @@ def what_if(model: ProcessModel, controller: Controller) -> tuple[WhatIf, ...]:
     model : ProcessModel
     controller : Controller
     """
-    changed = [model.scaled(*factors) for _, *factors in CHANGES]
+    bare = not np.any(np.abs(np.concatenate([model.poles, model.zeros])) > 0.0)
+    changes = [c for c in CHANGES if not (bare and c[2] != 1.0 and c[1] == c[3] == 1.0)]
+    changed = [model.scaled(*factors) for _, *factors in changes]
     table = margin_table(stack_loops(changed, [controller]))
     return tuple(
         WhatIf(
@@ -72,7 +74,7 @@ def what_if(model: ProcessModel, controller: Controller) -> tuple[WhatIf, ...]:
             max_sensitivity=float(table.max_sensitivity[k]),
             overshoot=overshoot(changed[k], controller) if table.stable[k] else None,
         )
-        for k, change in enumerate(CHANGES)
+        for k, change in enumerate(changes)
     )
 
 
