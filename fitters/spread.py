@@ -23,6 +23,10 @@ if TYPE_CHECKING:
 _BELIEVED = 0.05
 #: Fewest moves whose gains say anything of how they scatter.
 _FEWEST_MOVES = 3
+#: Single moves show a gain about twice as widely as a few together: only a scatter beyond that says more [1].
+_WIDER = 2.0
+#: The source that is the user's word, not the log's.
+STATED = "stated floor"
 #: Probability of an interval, and the normal deviate that goes with it [1].
 _COVERAGE = 0.95
 _NORMAL = 1.96
@@ -97,7 +101,7 @@ def plausible(choice: Choice, floor: Floor, count: int, seed: int) -> dict[str, 
         out["choice of structure"] = tuple(mixed[:count])
     if floor != Floor():
         centre = (best.model,) * count
-        out["stated floor"] = _spread(centre, seed + 1, floor)
+        out[STATED] = _spread(centre, seed + 1, floor)
     return out
 
 
@@ -108,10 +112,10 @@ def _determined(fit: Fit) -> bool:
 
 
 def _missing(fit: Fit, scatter: float) -> float:
-    """Give what must be added to the gain's own uncertainty to reach the scatter [1]."""
+    """Give what must be added to the gain's own uncertainty to reach the scatter; zero where noise explains it [1]."""
     gain = fit.parameters[0]
     own = gain.stderr / abs(gain.value) if gain.value != 0.0 else np.inf
-    return float(np.sqrt(max(scatter**2 - own**2, 0.0))) if np.isfinite(own) else 0.0
+    return float(np.sqrt(scatter**2 - own**2)) if scatter > _WIDER * own else 0.0
 
 
 def _spread(models: tuple[ProcessModel, ...], seed: int, by: Floor) -> tuple[ProcessModel, ...]:

@@ -6,7 +6,6 @@ from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
 import numpy as np
-from scipy.special import gammainc
 
 from pipeline.loop.controller import extra_dead_time, feedback_path, setpoint_path, sign
 
@@ -77,9 +76,9 @@ def batch_setpoint(
     forced = g * _at(sp_num, s) / _at(sp_den, s)
     y = forced / (s * (1.0 + g * _at(fb_num, s) / _at(fb_den, s)))
 
-    t = period / count * np.arange(count)
+    t = period / count * np.arange(points)
     first, second, order = _leading(sp_num, sp_den, g_num, g_den)
-    known = np.zeros((m, count))
+    known = np.zeros((m, points))
     since = t - delay[:, None]
     stepped, cornered = order == 0, (order == 1) | (order == 2)
     if stepped.any():
@@ -93,16 +92,21 @@ def batch_setpoint(
         part = first[:, None] * late / (s * (s + speed[:, None]) ** power[:, None])
         y = y - np.where(cornered[:, None], part, 0.0)
         # As the series has it: with its own echo from one period on, which may be no small part.
-        order_of = power[:, None].astype(float)
-        shape = gammainc(order_of, speed[:, None] * np.maximum(since, 0.0))
-        shape += np.exp(-_DAMPING) * gammainc(order_of, speed[:, None] * np.maximum(since + period, 0.0))
+        shape = _rise(power[:, None], speed[:, None] * np.maximum(since, 0.0))
+        shape += np.exp(-_DAMPING) * _rise(power[:, None], speed[:, None] * np.maximum(since + period, 0.0))
         known += np.where(cornered[:, None], (first / speed**power)[:, None] * shape, 0.0)
     # The last coefficient stands for both ends of the band.
     y[:, -1] *= 0.5
-    response = np.fft.irfft(y, n=count, axis=1) * (count / period) * np.exp(a * t) + known
+    series = np.fft.irfft(y, n=count, axis=1)[:, :points]
+    response = series * (count / period) * np.exp(a * t) + known
     response[since < 0.0] = 0.0
-    grid = np.asarray(t[:, :points], dtype=float)
-    return grid[0] if np.ndim(horizon) == 0 else grid, np.asarray(response[:, :points], dtype=float)
+    grid = np.asarray(np.broadcast_to(t, (length.shape[0], points)), dtype=float)
+    return grid[0] if np.ndim(horizon) == 0 else grid, np.asarray(response, dtype=float)
+
+
+def _rise(power: NDArray[np.int64], x: Reals) -> Reals:
+    """Give the step response of one or two equal lags at x time constants."""
+    return np.asarray(1.0 - np.exp(-x) * np.where(power == 1, 1.0, 1.0 + x), dtype=float)
 
 
 def _stacked(polys: Sequence[Sequence[float] | Reals]) -> Reals:

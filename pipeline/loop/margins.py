@@ -33,6 +33,8 @@ if TYPE_CHECKING:
 #: Grids of one loop and of a batch, whose crossings and peaks lie near the loops' own frequencies.
 _FINE = Grid(per_decade=80, floor=0.02)
 _COARSE = Grid(per_decade=24, floor=0.15, reach=1e2)
+#: Steps in which a peak is closed in on: to rounding, and to a millionth of the peak.
+_EXACT, _NEAR = 34, 14
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -151,7 +153,7 @@ def margin_table(loops: LoopStack, *, sensitivity: bool = True) -> MarginTable:
     pm = np.full(len(loops), np.inf)
     np.minimum.at(pm, gains.row, np.degrees(np.abs(gains.past)))
     gm, reduction = _gain_limits(s, phases)
-    ms = _sensitivity(s) if sensitivity else np.full(len(loops), np.inf)
+    ms = _sensitivity(s, _NEAR) if sensitivity else np.full(len(loops), np.inf)
     return MarginTable(
         stable=stable,
         phase_margin=np.where(stable, pm, 0.0),
@@ -197,7 +199,7 @@ def _gain_limits(s: Sweep, phases: Crossings) -> tuple[Reals, Reals]:
     return up, down
 
 
-def _peak(s: Sweep, value: Reals, f: object) -> Reals:
+def _peak(s: Sweep, value: Reals, f: object, steps: int) -> Reals:
     """Refine each row's smallest value from every dip within a quarter of the smallest."""
     assert callable(f)
     x = np.log(s.omega)
@@ -206,7 +208,7 @@ def _peak(s: Sweep, value: Reals, f: object) -> Reals:
     dip = (mid <= value[:, :-2]) & (mid <= value[:, 2:]) & (mid <= 1.25 * low[:, None])
     row, k = np.nonzero(dip)
     if row.size:
-        _, best = minima(lambda z, i: f(s.loops.response(np.exp(z), row[i])), x[k], x[k + 2])
+        _, best = minima(lambda z, i: f(s.loops.response(np.exp(z), row[i])), x[k], x[k + 2], steps=steps)
         np.minimum.at(low, row, best)
     return np.asarray(low, dtype=float)
 
@@ -215,10 +217,10 @@ def _ends(s: Sweep) -> tuple[NDArray[np.bool_], Reals, Reals]:
     return s.loops.delay > 0.0, s.loops.static(), s.loops.direct()
 
 
-def _sensitivity(s: Sweep) -> Reals:
+def _sensitivity(s: Sweep, steps: int = _EXACT) -> Reals:
     """Give Ms, its limits at zero and infinite frequency included."""
     value = np.abs((s.bottom + s.top) / s.bottom)
-    nearest = _peak(s, value, lambda response: np.abs(1.0 + response))
+    nearest = _peak(s, value, lambda response: np.abs(1.0 + response), steps)
     late, static, direct = _ends(s)
     at_zero = np.where(np.isfinite(static), np.abs(1.0 + static), np.inf)
     at_infinity = np.where(late, np.abs(1.0 - np.abs(direct)), np.abs(1.0 + direct))
@@ -230,7 +232,7 @@ def _complementary(s: Sweep) -> Reals:
     """Give Mt, its limits at zero and infinite frequency included."""
     with np.errstate(divide="ignore"):
         value = np.abs((s.bottom + s.top) / s.top)
-        nearest = _peak(s, value, lambda response: np.abs(1.0 + 1.0 / response))
+        nearest = _peak(s, value, lambda response: np.abs(1.0 + 1.0 / response), _EXACT)
         late, static, direct = _ends(s)
         at_zero = np.where(np.isfinite(static), np.abs(1.0 + 1.0 / static), 1.0)
         at_infinity = np.where(late, np.abs(1.0 - 1.0 / np.abs(direct)), np.abs(1.0 + 1.0 / direct))

@@ -213,6 +213,10 @@ def stable_in_time(model: ProcessModel, controller: Controller) -> bool:
         no count of encirclements takes part.
     """
     plan = _plan(model, controller)
+    lead = feedback_path(controller)
+    jump = model.high_frequency_gain * (lead[0][0] / lead[1][0] if lead[0].size == lead[1].size else 0.0)
+    if plan.delay > 0.0 and abs(jump) >= 1.0:
+        return False  # a jump of the PV comes round no smaller
     return spectral_radius(plan.loop, delay=plan.delay, h=plan.h) < 1.0
 
 

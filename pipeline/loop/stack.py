@@ -109,12 +109,12 @@ class LoopStack:
 
     def static(self) -> Reals:
         """Give L(0) by row: infinite, with the sign of its integral gain, when it integrates."""
-        gain = np.empty(len(self))
-        for i in range(len(self)):
-            n0, d0 = _trail(self.numerator[i]), _trail(self.denominator[i])
-            value = self.numerator[i, n0] / self.denominator[i, d0]
-            gain[i] = value if n0 == d0 else 0.0 if n0 > d0 else np.inf * value
-        return gain
+        n_coef, n_order = _trail(self.numerator)
+        d_coef, d_order = _trail(self.denominator)
+        with np.errstate(divide="ignore", invalid="ignore"):
+            value = n_coef / d_coef
+        endless = np.where(value > 0.0, np.inf, -np.inf)
+        return np.where(n_order == d_order, value, np.where(n_order > d_order, 0.0, endless))
 
 
 def _at_j(coef: NDArray[np.float64], omega: Reals) -> NDArray[np.complex128]:
@@ -140,17 +140,26 @@ def _lead(coef: Reals) -> tuple[Reals, NDArray[np.intp]]:
     return coef[np.arange(coef.shape[0]), degree], degree
 
 
-def _trail(coef: Reals) -> int:
-    return int(np.argmax(coef != 0.0))
+def _trail(coef: Reals) -> tuple[Reals, NDArray[np.intp]]:
+    order = np.argmax(coef != 0.0, axis=1)
+    return coef[np.arange(coef.shape[0]), order], order
 
 
-def _stack_rows(rows: list[NDArray[np.float64]]) -> Reals:
-    """Stack descending polynomials as ascending rows of one width."""
-    width = max(r.size for r in rows)
-    out = np.zeros((len(rows), width))
-    for i, r in enumerate(rows):
-        out[i, : r.size] = r[::-1]
-    return out
+def _rows(polynomials: Sequence[Sequence[float] | Reals]) -> Reals:
+    """Stack descending polynomials as rows of one width, zeros in front."""
+    width = max(len(p) for p in polynomials)
+    if all(len(p) == width for p in polynomials):
+        return np.array(polynomials, dtype=float)
+    return np.array([[0.0] * (width - len(p)) + list(p) for p in polynomials])
+
+
+def _products(a: Reals, b: Reals) -> Reals:
+    """Multiply descending polynomials row by row, one row serving all; give ascending rows."""
+    m, p, q = max(a.shape[0], b.shape[0]), a.shape[1], b.shape[1]
+    out = np.zeros((m, p + q - 1))
+    for k in range(q):
+        out[:, k : k + p] += a * b[:, k : k + 1]
+    return np.ascontiguousarray(out[:, ::-1])
 
 
 def stack_loops(models: Sequence[ProcessModel], controllers: Sequence[Controller]) -> LoopStack:
@@ -167,15 +176,10 @@ def stack_loops(models: Sequence[ProcessModel], controllers: Sequence[Controller
     LoopStack
         One row a pair.
     """
-    m = max(len(models), len(controllers))
-    nums, dens, delays = [], [], []
     paths = [feedback_path(c) for c in controllers]
-    late = [extra_dead_time(c) for c in controllers]
-    process = [(np.array(g.numerator), np.array(g.denominator), g.dead_time) for g in models]
-    for i in range(m):
-        (cn, cd), extra = paths[i % len(paths)], late[i % len(late)]
-        gn, gd, dead = process[i % len(process)]
-        nums.append(np.convolve(cn, gn))
-        dens.append(np.convolve(cd, gd))
-        delays.append(dead + extra)
-    return LoopStack(numerator=_stack_rows(nums), denominator=_stack_rows(dens), delay=np.array(delays))
+    process = [(g.numerator, g.denominator) for g in models]
+    return LoopStack(
+        numerator=_products(_rows([n for n, _ in process]), _rows([n for n, _ in paths])),
+        denominator=_products(_rows([d for _, d in process]), _rows([d for _, d in paths])),
+        delay=np.array([g.dead_time for g in models]) + np.array([extra_dead_time(c) for c in controllers]),
+    )

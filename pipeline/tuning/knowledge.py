@@ -18,7 +18,7 @@ if TYPE_CHECKING:
 KNOWN_TO = 3.0
 _SHARE = 90.0
 #: Points of the frequency grid, and how far it goes beyond the process's own frequencies [1].
-_POINTS, _REACH = 160, 30.0
+_POINTS, _REACH = 96, 30.0
 #: Any controller will do: only the process's own phase counts.
 _PLAIN = Controller(kind="P", gain=1.0, action="reverse")
 

@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from fitters.spread import Floor, plausible
+from fitters.spread import STATED, Floor, plausible
 from pipeline.loop.agreement import check_agreement
 from pipeline.loop.forms import Entered, Entry, action_for, understand
 from pipeline.loop.margins import margins
@@ -18,7 +18,7 @@ from pipeline.tuning.knowledge import known_until
 from pipeline.tuning.search import filter_time
 from pipeline.tuning.tuner import tune, with_floor
 from pipeline.tuning.types import Criteria
-from pipeline.tuning.uncertainty import back_off, held_phase_margin
+from pipeline.tuning.uncertainty import back_off
 
 if TYPE_CHECKING:
     from fitters.fit import Choice, Fit
@@ -202,14 +202,11 @@ def recommend(choice: Choice, asked: Wanted, *, log_interval: float) -> Recommen
     kind = asked.kind or kind_for(choice.best.model)
     drawn = plausible(choice, asked.floor, PLAUSIBLE, _SEED)
     nominal = with_floor(choice.best.model, kind, floor)
-    until = min(known_until(models, nominal) for models in drawn.values())
+    until = min(known_until(models, nominal) for name, models in drawn.items() if name != STATED)
     within = replace(asked.criteria, crossover=until if np.isfinite(until) else None)
     tuning = tune_model(choice.best.model, replace(asked, criteria=within), dead_time_floor=floor)
     sources = {name: [with_floor(m, kind, floor) for m in models] for name, models in drawn.items()}
-    percentile = asked.criteria.percentile
-    worst = {n: held_phase_margin(m, tuning.controller, percentile) for n, m in sources.items()}
-    source = min(worst, key=lambda name: worst[name])
-    backed_off = back_off(tuning, sources[source], asked.criteria, asked.entry)
+    backed_off, source = back_off(tuning, sources, asked.criteria, asked.entry)
     check_agreement(tuning.model, backed_off.controller, backed_off.margins, backed_off.prediction)
     return Recommended(
         tuning=tuning, backed_off=backed_off, dead_time_floor=floor, source=source, criteria=within

@@ -35,7 +35,7 @@ _SHORTEST, _LONGEST = 0.1, 60.0
 #: Derivative times tried first [share of the integral time].
 _SHARES = np.array([0.0, 0.03, 0.08, 0.14, 0.2, MOST_DERIVATIVE])
 #: Times tried first, and rounds of closer ones.
-_TIMES = {"PI": 30, "PD": 30, "PID": 16}
+_TIMES = {"PI": 24, "PD": 24, "PID": 14}
 _ROUNDS = 3
 #: How much closer together the next round's times are [1], and how far about the best the first
 #: round's derivative times go [share of the integral time].
@@ -253,7 +253,7 @@ def _around(job: Job, best: Shape, step: float, closeness: int) -> tuple[Reals, 
     """Give times and derivative shares about the best so far, closer together from round to round."""
     centre = best.derivative if job.pattern.kind == "PD" else best.integral
     if job.pattern.kind != "PID" or best.derivative == 0.0:
-        return centre * np.exp(np.linspace(-step, step, 9)), np.zeros(1)
+        return centre * np.exp(np.linspace(-step, step, 7)), np.zeros(1)
     wide = _SHARE_STEP / 2.0**closeness
     shares = best.derivative / best.integral + np.linspace(-wide, wide, 5)
     shares = np.unique(np.clip(shares, 0.0, MOST_DERIVATIVE))

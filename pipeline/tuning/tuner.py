@@ -113,6 +113,8 @@ def with_floor(model: ProcessModel, kind: Kind, floor: float) -> ProcessModel:
     floor : float
         Least effective dead time [s].
     """
+    if model.dead_time >= floor:
+        return model
     short = floor - model.effective_dead_time(kept=2 if kind in ("PD", "PID") else 1)
     return model if short <= 0.0 else replace(model, dead_time=model.dead_time + short)
 

@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -22,7 +22,7 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from fitters.process import ProcessModel
-    from pipeline.loop.forms import Entry
+    from pipeline.loop.forms import Entered, Entry
     from pipeline.loop.types import Controller
     from pipeline.tuning.types import Tuning
 
@@ -31,7 +31,7 @@ if TYPE_CHECKING:
 #: Percentiles of a band [%].
 _PERCENTILES = (5.0, 50.0, 95.0)
 #: Points of the step band [1].
-_POINTS = 320
+_POINTS = 256
 #: Horizon of the step band over the median model's settling time [1].
 _HORIZON = 3.0
 #: Gain factors tried before the exact one is closed in on [1].
@@ -102,23 +102,9 @@ def _three(x: Reals) -> tuple[float, float, float]:
     return a, b, c
 
 
-def held_phase_margin(models: Sequence[ProcessModel], controller: Controller, percentile: float) -> float:
-    """Give the phase margin at a percentile of the models [degrees].
-
-    Parameters
-    ----------
-    models : sequence of ProcessModel
-    controller : Controller
-    percentile : float
-        [%].
-    """
-    table = margin_table(stack_loops(models, [controller]), sensitivity=False)
-    return float(np.percentile(table.phase_margin, percentile, method="inverted_cdf"))
-
-
 @dataclass(frozen=True, kw_only=True)
 class _Slower:
-    """The settings made slower by a factor, over all plausible models.
+    """The settings made slower by a factor and rounded, over all plausible models.
 
     On an integrating process a lower gain alone lowers the phase margin: it rolls. There the
     integral time grows as the gain falls, which stretches the loop's time and keeps its shape.
@@ -127,15 +113,23 @@ class _Slower:
     models: Sequence[ProcessModel]
     controller: Controller
     stretched: bool
+    entry: Entry
+    #: Tables already worked out, by factor.
+    known: dict[float, MarginTable] = field(default_factory=dict)
 
-    def settings(self, factor: float) -> Controller:
+    def settings(self, factor: float) -> tuple[Controller, Entered]:
         c = self.controller
         longer = c.integral_time / factor if self.stretched else c.integral_time
-        return replace(c, gain=c.gain * factor, integral_time=longer)
+        return rounded(replace(c, gain=c.gain * factor, integral_time=longer), self.entry)
+
+    def table(self, factor: float) -> MarginTable:
+        if factor not in self.known:
+            self.known[factor] = margin_table(stack_loops(self.models, [self.settings(factor)[0]]))
+        return self.known[factor]
 
     def held(self, factor: float, percentile: float) -> float:
-        """Give the phase margin at a percentile of the models."""
-        return held_phase_margin(self.models, self.settings(factor), percentile)
+        """Give the phase margin at a percentile of the models [degrees]."""
+        return float(np.percentile(self.table(factor).phase_margin, percentile, method="inverted_cdf"))
 
     def lowered(self, percentile: float, asked: float) -> float | None:
         """Give the largest factor on the gain alone that holds, from each model's own range of gains."""
@@ -148,14 +142,21 @@ class _Slower:
         return next((float(f) for f in tried if np.sum((low <= f) & (f <= high)) >= needed), None)
 
 
-def back_off(tuning: Tuning, models: Sequence[ProcessModel], criteria: Criteria, entry: Entry) -> BackedOff:
+def _slower(tuning: Tuning, models: Sequence[ProcessModel], entry: Entry) -> _Slower:
+    stretched = tuning.model.integrators > 0 and tuning.controller.kind in ("PI", "PID")
+    return _Slower(models=models, controller=tuning.controller, stretched=stretched, entry=entry)
+
+
+def back_off(
+    tuning: Tuning, sources: Mapping[str, Sequence[ProcessModel]], criteria: Criteria, entry: Entry
+) -> tuple[BackedOff, str]:
     """Lower the gain until the percentile phase margin holds, and round to what can be entered.
 
     Parameters
     ----------
     tuning : Tuning
-    models : sequence of ProcessModel
-        Plausible models of one structure.
+    sources : mapping of str to sequence of ProcessModel
+        Plausible models of one structure, by what they were drawn from.
     criteria : Criteria
     entry : Entry
         How the controller takes its settings.
@@ -163,12 +164,16 @@ def back_off(tuning: Tuning, models: Sequence[ProcessModel], criteria: Criteria,
     Returns
     -------
     BackedOff
-        Of the rounded settings, after the largest factor up to one on the gain that holds the phase margin at the
-        percentile. `held` is False where no factor does, as on loops that need their gain;
-        the factor is then the one that comes nearest, and a remark says so.
+        Of the rounded settings, after the largest factor up to one on the gain that holds the
+        phase margin at the percentile. `held` is False where no factor does, as on loops that
+        need their gain; the factor is then the one that comes nearest, and a remark says so.
+    str
+        The source that ruled: the one that leaves the least phase margin.
     """
-    stretched = tuning.model.integrators > 0 and tuning.controller.kind in ("PI", "PID")
-    slower = _Slower(models=models, controller=tuning.controller, stretched=stretched)
+    by_source = {name: _slower(tuning, models, entry) for name, models in sources.items()}
+    ruling = min(by_source, key=lambda name: by_source[name].held(1.0, criteria.percentile))
+    slower = by_source[ruling]
+    stretched = slower.stretched
     asked = criteria.percentile_phase_margin
     factor, held = 1.0, True
     remarks: list[Caution] = []
@@ -197,18 +202,18 @@ def back_off(tuning: Tuning, models: Sequence[ProcessModel], criteria: Criteria,
                 "on an integrating process a lower gain alone would roll.",
             )
         )
-    controller, entered = rounded(slower.settings(factor), entry)
-    table = margin_table(stack_loops(models, [controller]))
-    return BackedOff(
+    controller, entered = slower.settings(factor)
+    backed_off = BackedOff(
         controller=controller,
         entered=entered,
         margins=margins(tuning.model, controller),
         prediction=predict(tuning.model, controller),
-        bands=_bands(models, controller, table),
+        bands=_bands(slower.models, controller, slower.table(factor)),
         factor=factor,
         held=held,
         remarks=tuple(remarks),
     )
+    return backed_off, ruling
 
 
 def _factor(slower: _Slower, percentile: float, asked: float) -> tuple[float, bool, float]:

@@ -43,7 +43,7 @@ def test_the_criterion_is_kept_in_94_to_97_percent_of_fresh_plausible_plants(sou
             models = plausible(choice, FLOOR, count, start)[source]
             return [with_floor(m, "PI", late) for m in models]
 
-        made = back_off(tuning, drawn(PLAUSIBLE, 1), Criteria(), Entry())
+        made = back_off(tuning, {source: drawn(PLAUSIBLE, 1)}, Criteria(), Entry())[0]
         if made.factor == 1.0 or not made.held:
             continue
         table = batch_margins(drawn(FRESH, 9_000 + seed), made.controller)

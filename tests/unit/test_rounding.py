@@ -29,7 +29,7 @@ def test_margins_shown_are_those_of_the_rounded_numbers(kind, equation):
         derivative_step=0.01,
     )
     tuning = tune(LAG, kind=kind, criteria=Criteria())
-    made = back_off(tuning, [LAG] * 8, Criteria(), entry)
+    made = back_off(tuning, {"noise in the log": [LAG] * 8}, Criteria(), entry)[0]
     gain, integral, derivative = understand(made.entered, entry)
     c = made.controller
     assert (c.gain, c.integral_time, c.derivative_time) == pytest.approx(
