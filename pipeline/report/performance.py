@@ -29,6 +29,9 @@ _READING = 0.035
 #: Below this nobody sees a peak on a trend [%].
 _PEAK_SEEN = 1.5
 
+#: Degrees and percent are shown to no more than a tenth, however sure the log is.
+_FINEST = 0.3
+
 #: Digits of a predicted time: models know their lags to a few percent at best.
 _TIME_DIGITS = 2
 
@@ -110,6 +113,8 @@ def _row(
     if band is None:
         return name, wanted, _with(numbers.plain(reached), unit), "not computed"
     half = numbers.half_width(band[1], band[0], band[2])
+    if unit:
+        half = max(half, _FINEST)
     ends = _with(numbers.bounds(band[0], band[2], half), unit)
     finest = _READING * abs(reached)
     shown = numbers.rounded(reached, min(half, max(finest, _OVERSHOOT_READING) if unit == " %" else finest))
@@ -180,7 +185,7 @@ def phase_margin(record: Record) -> str:
     if record.bands is None or math.isinf(record.bands.phase_margin_deg[2]):
         return degrees(reached)
     low, _, high = record.bands.phase_margin_deg
-    half = min(numbers.half_width(reached, low, high), _READING * reached)
+    half = max(min(numbers.half_width(reached, low, high), _READING * reached), _FINEST)
     return f"{numbers.rounded(reached, half)}° ({numbers.bounds(low, high, half)}°)"
 
 
@@ -262,7 +267,10 @@ def overshoot(record: Record, p: PredictionInfo) -> str:
     if record.bands is None:
         return numbers.percent(p.overshoot_pct)
     low, _, high = record.bands.overshoot_pct
-    return numbers.interval(p.overshoot_pct, low, high, "%")
+    half = max(numbers.half_width(p.overshoot_pct, low, high), _FINEST)
+    if not math.isfinite(half):
+        return numbers.interval(p.overshoot_pct, low, high, "%")
+    return f"{numbers.rounded(p.overshoot_pct, half)} ({numbers.bounds(low, high, half)}) %"
 
 
 def _first_peak(p: PredictionInfo) -> tuple[Fact, ...]:

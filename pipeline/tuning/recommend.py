@@ -16,7 +16,7 @@ from pipeline.loop.types import Controller
 from pipeline.tuning.duties import USUAL
 from pipeline.tuning.knowledge import known_until
 from pipeline.tuning.search import filter_time
-from pipeline.tuning.tuner import tune, with_floor
+from pipeline.tuning.tuner import least_dead_time, raised, tune
 from pipeline.tuning.types import Criteria
 from pipeline.tuning.uncertainty import back_off
 
@@ -201,11 +201,12 @@ def recommend(choice: Choice, asked: Wanted, *, log_interval: float) -> Recommen
     floor = _UNSEEN_SHARE * log_interval
     kind = asked.kind or kind_for(choice.best.model)
     drawn = plausible(choice, asked.floor, PLAUSIBLE, _SEED)
-    nominal = with_floor(choice.best.model, kind, floor)
+    least = least_dead_time(choice.best.model, kind, floor)
+    nominal = raised(choice.best.model, least)
     until = min(known_until(models, nominal) for name, models in drawn.items() if name != STATED)
     within = replace(asked.criteria, crossover=until if np.isfinite(until) else None)
     tuning = tune_model(choice.best.model, replace(asked, criteria=within), dead_time_floor=floor)
-    sources = {name: [with_floor(m, kind, floor) for m in models] for name, models in drawn.items()}
+    sources = {name: [raised(m, least) for m in models] for name, models in drawn.items()}
     backed_off, source = back_off(tuning, sources, asked.criteria, asked.entry)
     check_agreement(tuning.model, backed_off.controller, backed_off.margins, backed_off.prediction)
     return Recommended(
@@ -297,7 +298,7 @@ def as_found(
         scan=asked.scan,
         compute_delay=asked.compute_delay,
     )
-    model = with_floor(fit.model, kind, floor)
+    model = raised(fit.model, least_dead_time(fit.model, kind, floor))
     reached = margins(model, controller)
     return entered, reached, overshoot(model, controller) if reached.stable else None
 

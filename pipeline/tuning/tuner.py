@@ -81,7 +81,7 @@ def tune(
     -----
     PID keeps Ti >= 4 Td, so that every controller equation can hold the result.
     """
-    held = with_floor(model, kind, dead_time_floor)
+    held = raised(model, least_dead_time(model, kind, dead_time_floor))
     pattern = Controller(
         kind=kind,
         gain=1.0,
@@ -102,21 +102,34 @@ def tune(
     return _tuned(job, criteria)
 
 
-def with_floor(model: ProcessModel, kind: Kind, floor: float) -> ProcessModel:
-    """Give the model with its dead time raised where the effective one is less than is believable.
+def least_dead_time(model: ProcessModel, kind: Kind, floor: float) -> float:
+    """Give the dead time below which the effective one would be less than is believable [s].
 
     Parameters
     ----------
     model : ProcessModel
+        Its lags and inverse zeros make up the rest of the effective dead time.
     kind : {"P", "I", "PI", "PD", "PID"}
         Derivative action sees past one lag more.
     floor : float
         Least effective dead time [s].
     """
-    if model.dead_time >= floor:
-        return model
-    short = floor - model.effective_dead_time(kept=2 if kind in ("PD", "PID") else 1)
-    return model if short <= 0.0 else replace(model, dead_time=model.dead_time + short)
+    if floor == 0.0:
+        return 0.0
+    hidden = model.effective_dead_time(kept=2 if kind in ("PD", "PID") else 1) - model.dead_time
+    return max(floor - hidden, 0.0)
+
+
+def raised(model: ProcessModel, least: float) -> ProcessModel:
+    """Give the model with at least that dead time.
+
+    Parameters
+    ----------
+    model : ProcessModel
+    least : float
+        [s].
+    """
+    return model if model.dead_time >= least else replace(model, dead_time=least)
 
 
 def _tuned(job: Job, criteria: Criteria) -> Tuning:

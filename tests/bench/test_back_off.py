@@ -13,7 +13,7 @@ from fitters.spread import Floor, plausible
 from pipeline.loop.forms import Entry
 from pipeline.loop.margins import batch_margins
 from pipeline.tuning.recommend import PLAUSIBLE
-from pipeline.tuning.tuner import tune, with_floor
+from pipeline.tuning.tuner import least_dead_time, raised, tune
 from pipeline.tuning.types import Criteria
 from pipeline.tuning.uncertainty import back_off
 
@@ -41,7 +41,7 @@ def test_the_criterion_is_kept_in_94_to_97_percent_of_fresh_plausible_plants(sou
 
         def drawn(count, start, choice=choice, late=late):
             models = plausible(choice, FLOOR, count, start)[source]
-            return [with_floor(m, "PI", late) for m in models]
+            return [raised(m, least_dead_time(choice.best.model, "PI", late)) for m in models]
 
         made = back_off(tuning, {source: drawn(PLAUSIBLE, 1)}, Criteria(), Entry())[0]
         if made.factor == 1.0 or not made.held:

@@ -4,6 +4,7 @@ Run with: pytest tests/bench/test_tuning_speed.py -m bench -s
 """
 
 import time
+from functools import partial
 
 import pytest
 from logs import bump_log, log_data
@@ -43,9 +44,10 @@ def test_tuning_with_bands_is_quick(kind):
     took = {}
     for name, (spec, span) in PLANTS.items():
         t, co, pv = bump_log(built(spec), span=span, rows=300, noise=0.01, seed=3)
-        choice = choose(log_data(t, co, pv))
-        fit = spent(lambda data=log_data(t, co, pv): choose(data), 3)
-        job = spent(lambda choice=choice: recommend(choice, asked, log_interval=span / 300.0))
+        data, interval = log_data(t, co, pv), span / 300.0
+        choice = choose(data)
+        fit = spent(partial(choose, data), 3)
+        job = spent(partial(recommend, choice, asked, log_interval=interval))
         took[name] = job
         print(f"\n{kind}, {name}: {1e3 * job:.0f} ms ({job / fit:.2f} of its fit)", end="")
     print()
