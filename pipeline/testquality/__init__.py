@@ -5,6 +5,7 @@
     facts.py   log and bumps -> noise, and what the PV did after each bump, worked out once
     rule.py    one row of the table
     shape.py   a quick look at all moves together: common response, a gain each, what is left over
+    load.py    one load step beside the moves
     record.py  checks of the record: the columns, the mode, is there a move at all
     answer.py  checks of the answer: its size, baseline, rows, resolution, ranges, hold
     storage.py checks of how the PV came into the file: cycles, filters, archives, spikes

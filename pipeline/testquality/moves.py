@@ -7,8 +7,9 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from pipeline.testquality.facts import Answer, Facts
+from pipeline.testquality.load import find_load
 from pipeline.testquality.rule import PRACTICE, Found, Rule
-from pipeline.testquality.shape import Shape, unit_response
+from pipeline.testquality.shape import Shape
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -20,13 +21,11 @@ _EARLY_STEADY = 0.05
 #: Share of the moves that must show it [1].
 _EARLY_MOVES = 0.6
 #: Part of a rise before the move that is looked at, and rows averaged in it.
-_EARLY_RISES, _EARLY_ROWS = 0.3, 4
+_EARLY_RISES, _EARLY_ROWS = 0.3, 3
 #: Size of a disturbance as a share of the answer: care, stop [1]: a fifth costs a quarter of the gain.
-_LOAD_CARE, _LOAD_STOP = 0.10, 1.0
-#: Share of what is left over that one load step must explain, and its standard errors [1].
-_LOAD_EXPLAINS, _LOAD_CLEAR = 0.5, 6.0
-#: Places at which a load step is tried.
-_LOAD_PLACES = 60
+_LOAD_CARE, _LOAD_STOP = 0.10, 0.75
+#: Share of what the moves leave over that a load step must not leave [1].
+_LOAD_LEAVES = 0.5
 #: Share of the PV that the moves must explain before the rest is looked at [1].
 _EXPLAINED = 0.8
 #: Gain of a reversal over the gain of a move that goes on, below which there is a dead band [1].
@@ -44,8 +43,9 @@ def _early(facts: Facts) -> Found:
     looked = [e for a in facts.answers for e in [_before(facts, a)] if e is not None]
     if not looked:
         return None
-    early = [share for share, clear in looked if share > _EARLY_SHARE and clear > _EARLY_CLEAR]
-    if len(early) < _EARLY_MOVES * len(looked):
+    early = [share for share, _ in looked if share > _EARLY_SHARE]
+    clear = sum(clear for _, clear in looked) / np.sqrt(len(looked))
+    if len(early) < _EARLY_MOVES * len(looked) or clear < _EARLY_CLEAR:
         return None
     share = float(np.median(early))
     return (
@@ -65,8 +65,8 @@ def _before(facts: Facts, answer: Answer) -> tuple[float, float] | None:
     t, pv = facts.log.t[known], facts.log.pv[known]
     at = answer.bump.moves[0].at_s
     window = _EARLY_RISES * answer.rise_s
-    # the move is logged up to one row late
-    last = np.flatnonzero((t < at - facts.log.interval) & (t >= at - window))[-_EARLY_ROWS:]
+    # on the row before the move the CO still was the old one, so the PV knew nothing of the new
+    last = np.flatnonzero((t < at) & (t >= at - window))[-_EARLY_ROWS:]
     base = np.flatnonzero((t < at - 2.0 * window) & (t >= max(answer.bump.start_s, at - 6.0 * window)))
     if last.size < 2 or base.size < 8 or answer.travel <= 0.0 or facts.noise <= 0.0:
         return None
@@ -85,28 +85,15 @@ def _before(facts: Facts, answer: Answer) -> tuple[float, float] | None:
 
 
 def _load(facts: Facts) -> Found:
-    """One step that no move explains, answered like the moves are."""
+    """A load step and one gain for all moves explain the PV far better than a gain for each move."""
     shape = facts.shape
-    if shape is None or shape.explained < _EXPLAINED or shape.gains.size < 2 or facts.travel <= 0.0:
+    if shape is None or shape.gains.size < 2 or facts.travel <= 0.0:
         return None
-    rest = float(shape.left @ shape.left)
-    places = np.linspace(shape.t[0], shape.t[-1], _LOAD_PLACES + 2)[1:-1]
-    best, size, at = 0.0, 0.0, 0.0
-    for place in places:
-        step = unit_response(shape.t - place, shape.lag_s, shape.order)
-        step = step - shape.basis @ (shape.basis.T @ step)
-        energy = float(step @ step)
-        # a step the moves can imitate says nothing
-        if energy < 1e-3 * shape.t.size:
-            continue
-        amplitude = float(step @ shape.left) / energy
-        if amplitude**2 * energy > best:
-            best, size, at = amplitude**2 * energy, amplitude, float(place)
-    if best < _LOAD_EXPLAINS * rest or not _clear(shape, best, rest):
+    used = [a.bump for a in facts.answers][: shape.gains.size]
+    step = find_load(shape.t, shape.seen, used, facts.rise_s)
+    if step is None or step.squares > _LOAD_LEAVES * float(shape.left @ shape.left):
         return None
-    # a lag as long as an integrator's makes the step a ramp: count what it does in a rise
-    share = abs(size) * float(unit_response(np.array([3.0 * facts.rise_s]), shape.lag_s, shape.order)[0])
-    share /= facts.travel
+    share = abs(step.size) / facts.travel
     if share < _LOAD_CARE:
         return None
     stop = share > _LOAD_STOP
@@ -116,18 +103,9 @@ def _load(facts: Facts) -> Found:
         _LOAD_STOP if stop else _LOAD_CARE,
         (
             f"Something other than the CO moved the PV by about {100.0 * share:.0f} % of an answer near "
-            f"{at:.6g} s. Find out what it was, and repeat the test without it."
+            f"{step.at_s:.6g} s. Find out what it was, and repeat the test without it."
         ),
     )
-
-
-def _clear(shape: Shape, best: float, rest: float) -> bool:
-    """Tell whether a step stands out of what is left without it, which is rarely white."""
-    left = shape.left
-    along = float(left[1:] @ left[:-1]) / max(float(left @ left), 1e-300)
-    longer = (1.0 + min(max(along, 0.0), 0.9)) / (1.0 - min(max(along, 0.0), 0.9))
-    variance = max(rest - best, 1e-300) / max(left.size - shape.basis.shape[1] - 1, 1)
-    return bool(best > _LOAD_CLEAR**2 * variance * np.sqrt(longer))
 
 
 def _usable(facts: Facts) -> tuple[Shape, NDArray[np.bool_]] | None:

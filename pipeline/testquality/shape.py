@@ -41,8 +41,8 @@ class Shape:
 
     Attributes
     ----------
-    t, left : (n,) ndarray
-        Rows looked at [s], and what the moves do not explain there [PV unit].
+    t, seen, left : (n,) ndarray
+        Rows looked at [s], the PV there about its mean, and what the moves do not explain of it [PV unit].
     dead_time_s, lag_s : float
         Of the common response [s].
     order : {1, 2}
@@ -53,11 +53,10 @@ class Shape:
         CO change of each bump [CO unit].
     explained : float
         Share of the PV's variance that the moves explain [1].
-    basis : (n, p) ndarray
-        Orthonormal columns spanned by the moves, offset, drift and earlier answer.
     """
 
     t: NDArray[np.float64]
+    seen: NDArray[np.float64]
     left: NDArray[np.float64]
     dead_time_s: float
     lag_s: float
@@ -66,7 +65,6 @@ class Shape:
     errors: NDArray[np.float64]
     sizes: NDArray[np.float64]
     explained: float
-    basis: NDArray[np.float64]
 
 
 def unit_response(since: NDArray[np.float64], lag: float, order: int) -> NDArray[np.float64]:
@@ -158,13 +156,13 @@ def look(
     design = _design(t, used, lag, dead, order)
     solved, *_ = np.linalg.lstsq(design, centred, rcond=None)
     left = centred - design @ solved
-    q, _ = np.linalg.qr(design)
     free = max(t.size - design.shape[1], 1)
     inverse = np.linalg.pinv(design.T @ design)
     errors = np.sqrt(np.maximum(np.diag(inverse), 0.0) * float(left @ left) / free)
     m = len(used)
     return Shape(
         t=t,
+        seen=centred,
         left=left,
         dead_time_s=dead,
         lag_s=lag,
@@ -173,7 +171,6 @@ def look(
         errors=errors[:m],
         sizes=np.array([b.moves[-1].after - b.moves[0].before for b in used]),
         explained=1.0 - left_squares / whole,
-        basis=q,
     )
 
 
