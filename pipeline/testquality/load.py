@@ -58,7 +58,10 @@ def find_load(
     LoadStep or None
         None where no step differs from what the moves do.
     """
-    places = np.linspace(t[0], t[-1], _PLACES + 2)[1:-1]
+    # at the very start a step is the rest of an earlier answer, at the very end nothing shows it
+    places = np.linspace(t[0] + rise_s, t[-1] - 0.5 * rise_s, _PLACES)
+    if places[-1] <= places[0]:
+        return None
     best: LoadStep | None = None
     for order in (1, 2):
         for lag in _LAGS * rise_s / order:

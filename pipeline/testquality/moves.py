@@ -194,27 +194,6 @@ def _apart(facts: Facts) -> Found:
     )
 
 
-def _wrong_way(facts: Facts) -> Found:
-    """The PV goes the other way than the declared control action takes for granted."""
-    action = facts.sheet.controller.action
-    usable = _usable(facts)
-    if action is None or usable is None:
-        return None
-    gain = float(np.median(usable[0].gains))
-    if (gain > 0.0) == (action == "reverse"):
-        return None
-    way = "rises" if gain > 0.0 else "falls"
-    return (
-        "stop",
-        gain,
-        0.0,
-        (
-            f"The PV {way} when the CO rises, and the loop sheet says {action} action: that loop would run away. "
-            "Check the action in the controller, and which columns are PV and CO."
-        ),
-    )
-
-
 MOVE_RULES: tuple[Rule, ...] = (
     Rule(code="answer-before-move", source=PRACTICE, check=_early),
     Rule(
@@ -226,10 +205,5 @@ MOVE_RULES: tuple[Rule, ...] = (
     ),
     Rule(
         code="moves-differ", source="gain up over gain down 0.8 to 1.25 good (common practice)", check=_apart
-    ),
-    Rule(
-        code="action-against-process",
-        source="a reverse-acting controller suits a positive process gain (common practice)",
-        check=_wrong_way,
     ),
 )

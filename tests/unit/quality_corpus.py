@@ -514,7 +514,7 @@ def _(rng):
     return simulate(rng, moves=((80, 5), (220, -5)), end=360.0, load=lambda t: np.where(t > 84, 5.0, 0.0))
 
 
-@case(37, "PV goes the other way than declared", REFUSE, "action-against-process")
+@case(37, "PV goes the other way than declared", REFUSE, "action-differs")
 def _(rng):
     test = simulate(rng, Process(gain=-2.0))
     test.sheet = {"controller": {"action": "reverse"}}

