@@ -75,8 +75,10 @@ class ColumnsTable(_Table):
 
 
 class FileTable(_Table):
-    """[file]: how the log file is written."""
+    """[file]: which part of the log file to read, and its decimal mark."""
 
+    part: _Text | None = None
+    run: Annotated[int, Field(ge=1)] | None = None
     decimal: Literal[".", ","] | None = None
 
 

@@ -232,6 +232,14 @@ def _elapsed(
                 "sample_s and "
                 "leave the column out.",
             )
+        if known.size > 1 and bool(np.all(np.abs(np.diff(known)) == 1.0)):
+            raise QuestionForUser(
+                "The times count 0, 1, 2 and nothing says what: seconds, minutes or rows.",
+                file=file,
+                column=field.name,
+                remedy='Say which in the loop sheet: [time] unit = "s" or "min"; for counted rows [time] '
+                "sample_s, and leave the column out.",
+            )
         notes.append(
             Caution(
                 code="time-unit-assumed",

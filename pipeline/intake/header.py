@@ -64,11 +64,10 @@ def split_cells(line: str, delimiter: str) -> list[str]:
     return [cell.strip() for cell in line.split(delimiter)]
 
 
-def holds_data(cells: Sequence[str]) -> bool:
-    """Tell whether most cells that hold anything are numbers or times."""
+def data_share(cells: Sequence[str]) -> float:
+    """Give the share of the cells that hold anything which are numbers or times [1]."""
     full = [cell for cell in cells if not is_missing(cell)]
-    good = sum(is_number(cell) or is_stamp(cell) for cell in full)
-    return bool(full) and good > 0.5 * len(full)
+    return sum(is_number(cell) or is_stamp(cell) for cell in full) / len(full) if full else 0.0
 
 
 def read_header(lines: Sequence[str], above: Sequence[int], delimiter: str, width: int) -> Header:
@@ -97,7 +96,7 @@ def read_header(lines: Sequence[str], above: Sequence[int], delimiter: str, widt
             break
         if not units and _says_units(cells) and any(len(later) >= 2 for _, later in rows[k + 1 : k + 2]):
             units = cells
-        elif holds_data(cells[1:] if names or cells[0] else cells):
+        elif data_share(cells[1:] if names or cells[0] else cells) > 0.5:
             if not names and not _is_range(cells):
                 break
         elif not names:

@@ -6,10 +6,12 @@ from collections import Counter
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
+import numpy as np
+
 from pipeline.errors import LogUnreadable, QuestionForUser
 from pipeline.findings import Caution
 from pipeline.intake.cells import decimal_mark, is_missing, is_number, is_stamp
-from pipeline.intake.header import COMMENT, holds_data, read_header, split_cells
+from pipeline.intake.header import COMMENT, data_share, read_header, split_cells
 
 #: Letters of a bad cell that a message shows.
 _SHOWN = 20
@@ -17,6 +19,8 @@ _SHOWN = 20
 _DELIMITERS = ("\t", ";", ",", "|", " ")
 #: Share of the rows that may have another number of fields and be set aside [1].
 _STRAY_SHARE = 0.01
+#: Share of numbers and times in a line from which it holds data [1], less where most lines have less.
+_MOSTLY = 0.51
 #: Lines looked at to decide on the layout: enough to outvote preambles and footers.
 _SAMPLE_LINES = 60
 
@@ -81,7 +85,7 @@ def find_layout(lines: Sequence[str], *, file: str, decimal: str | None = None) 
     tail = plain[len(plain) // 4 :]
     sample = [lines[i] for i in tail[:: max(1, len(tail) // _SAMPLE_LINES)]]
     delimiter, width = _find_delimiter(sample, lines, filled, file)
-    first = _first_data(lines, plain, delimiter, width)
+    first = _first_data(lines, plain, delimiter, width, sample)
     if first is None:
         raise _no_numbers(lines, filled, file)
     header = read_header(lines, [i for i in filled if i < first], delimiter, width)
@@ -151,15 +155,20 @@ def _no_numbers(lines: Sequence[str], filled: Sequence[int], file: str) -> LogUn
     )
 
 
-def _first_data(lines: Sequence[str], plain: Sequence[int], delimiter: str, width: int) -> int | None:
-    """Find the first line that, like the lines after it, holds mostly numbers."""
+def _first_data(
+    lines: Sequence[str], plain: Sequence[int], delimiter: str, width: int, sample: Sequence[str]
+) -> int | None:
+    """Find the first line that, like the lines after it, holds as many numbers as most lines do."""
+    usual = float(np.median([data_share(split_cells(line, delimiter)) for line in sample]))
+    # a reading a row, in words now and then: its time alone must do
+    least = _MOSTLY if usual > _MOSTLY else 0.5 * usual
     ahead = 3  # rows after it that must agree: a row of ranges above the header has fewer
     verdicts: dict[int, bool] = {}
 
     def fits(k: int) -> bool:
         if k not in verdicts:
             cells = split_cells(lines[plain[k]], delimiter)
-            verdicts[k] = abs(len(cells) - width) <= 1 and holds_data(cells)
+            verdicts[k] = abs(len(cells) - width) <= 1 and data_share(cells) >= least
         return verdicts[k]
 
     for k in range(len(plain)):

@@ -49,7 +49,7 @@ _WORDS_BY_ROLE: tuple[tuple[Role, float, str], ...] = (
     ("co", 2.0, "opening vfd fan pump voltage voltaje duty travel ventilation"),
     ("co", 1.0, "u input steam power current fuel feed volt"),
     ("sp", 3.0, "sp setpoint sollwert consigna setpt reference target"),
-    ("mode", 3.0, "mode auto man modus"),
+    ("mode", 3.0, "mode auto man modus manual automatic automatik"),
     ("time", 3.0, "time t timestamp date datetime tiempo zeit temps elapsed seconds secs minutes hours"),
     ("time", 3.0, "uhrzeit datum fecha hora stamp clock"),
     ("index", 2.0, "id index idx row no nr sample samples scan record seq n"),

@@ -13,12 +13,15 @@ import pandas as pd
 from pipeline.errors import LogUnreadable, UsageError
 from pipeline.findings import Caution
 from pipeline.intake.clock import Clock, read_clock
+from pipeline.intake.flags import without_bad
 from pipeline.intake.layout import find_layout
 from pipeline.intake.log import Column, Log
+from pipeline.intake.long import spread_tags
 from pipeline.intake.mode import read_mode
 from pipeline.intake.names import read_name, split_unit
 from pipeline.intake.order import settle_order
 from pipeline.intake.roles import Roles, assign_roles
+from pipeline.intake.runs import choose_run
 from pipeline.intake.table import Field, read_table
 from pipeline.intake.text import read_text
 from pipeline.settings import ColumnName, LoopSheet
@@ -58,24 +61,35 @@ def read_log(path: str | Path, *, sheet: LoopSheet = _NOTHING_SAID) -> Log:
     UsageError
         If the sheet names a column the file does not have.
     """
-    text = read_text(path)
+    text = read_text(path, part=sheet.file.part)
     layout = find_layout(text.lines, file=text.file, decimal=sheet.file.decimal)
     fields = read_table(text.lines, layout, file=text.file)
     wanted = sheet.columns
-    named = {
-        key: _look_up(fields, getattr(wanted, key), key, text.file)
-        for key in ("time", "pv", "co", "sp", "mode")
-    }
     clock = read_clock(
-        fields, sheet=sheet, named=named["time"], lines=layout.body, headed=layout.headed, file=text.file
+        fields,
+        sheet=sheet,
+        named=_look_up(fields, wanted.time, "time", text.file),
+        lines=layout.body,
+        headed=layout.headed,
+        file=text.file,
     )
+    spread = spread_tags(fields, clock, layout.body)
+    if spread is None:
+        fields, flag_notes = without_bad(fields)
+    fields, clock, lines, shape_notes = spread or (fields, clock, layout.body, flag_notes)
+    fields, clock, lines, run_notes = choose_run(
+        fields, clock, lines, wanted=sheet.file.run, fewest=MIN_ROWS, file=text.file
+    )
+    named = {
+        key: _look_up(fields, getattr(wanted, key), key, text.file) for key in ("pv", "co", "sp", "mode")
+    }
     rest = [f for f in fields if f.index not in clock.taken]
     numeric = [f.values for f in rest if f.values is not None]
-    order = settle_order(clock.t, numeric, lines=layout.body)
+    order = settle_order(clock.t, numeric, lines=lines)
     if order.rows.size < MIN_ROWS:
         raise _too_few(order.rows.size, "rows", text.file)
     for key in ("pv", "co", "sp"):
-        _need_numbers(named[key], text.file, layout.body)
+        _need_numbers(named[key], text.file, lines)
     roles = assign_roles(
         _of_the_tag(rest, sheet.loop.tag),
         order.rows,
@@ -86,10 +100,19 @@ def read_log(path: str | Path, *, sheet: LoopSheet = _NOTHING_SAID) -> Log:
         file=text.file,
     )
     for field in (roles.pv, roles.co):
-        _need_numbers(field, text.file, layout.body)
+        _need_numbers(field, text.file, lines)
     shown = [roles.pv, roles.co, *(f for f in (roles.sp, roles.mode) if f)]
     cells = [Caution(code="cell-form", level="note", text=guess) for f in shown for guess in f.guesses]
-    notes = [*text.notes, *layout.notes, *clock.notes, *order.notes, *cells, *roles.notes]
+    notes = [
+        *text.notes,
+        *layout.notes,
+        *clock.notes,
+        *shape_notes,
+        *run_notes,
+        *order.notes,
+        *cells,
+        *roles.notes,
+    ]
     return _assemble(
         text.file, text.name, text.sha256, sheet, clock, roles, order.rows, notes, len(layout.body)
     )
@@ -199,15 +222,17 @@ def _assemble(
                 value=float(early),
             )
         )
+    automatic = None
+    if roles.mode is not None:
+        automatic, note = read_mode(roles.mode, rows, co)
+        automatic = None if automatic is None else automatic[early:]
+        notes.extend(note)
+    sp = None if roles.sp is None or roles.sp.values is None else _held(roles.sp.values[rows])[early:]
     rows, co = rows[early:], co[early:]
     pv = roles.pv.values[rows]
     if int(np.isfinite(pv).sum()) < MIN_ROWS:
         raise _too_few(int(np.isfinite(pv).sum()), "rows with a PV", file)
     notes.extend(_missing(roles, rows, pv))
-    automatic = None
-    if roles.mode is not None:
-        automatic, note = read_mode(roles.mode, rows, co)
-        notes.extend(note)
     t = clock.t[rows] - clock.t[rows[0]]
     return Log(
         file=name,
@@ -217,7 +242,7 @@ def _assemble(
         t=t,
         pv=pv,
         co=co,
-        sp=None if roles.sp is None or roles.sp.values is None else _held(roles.sp.values[rows]),
+        sp=sp,
         automatic=automatic,
         time_column=clock.column,
         pv_column=_column(roles.pv, sheet.pv.unit, roles.pv_reason),

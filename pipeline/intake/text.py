@@ -9,6 +9,7 @@ from pathlib import Path
 
 from pipeline.errors import LogUnreadable
 from pipeline.findings import Caution
+from pipeline.intake.wrapped import unwrap
 
 _MARKS: tuple[tuple[bytes, str], ...] = (
     (codecs.BOM_UTF8, "utf-8-sig"),
@@ -18,14 +19,8 @@ _MARKS: tuple[tuple[bytes, str], ...] = (
     (codecs.BOM_UTF16_BE, "utf-16"),
 )
 
-#: First bytes of files that hold a log in some other wrapping, and what they are called.
-_WRAPPED: tuple[tuple[bytes, str], ...] = (
-    (b"PK\x03\x04", "a spreadsheet workbook or a zip archive"),
-    (b"\xd0\xcf\x11\xe0", "an old spreadsheet workbook"),
-    (b"%PDF", "a PDF document"),
-    (b"\x1f\x8b", "a compressed file"),
-)
-
+#: First bytes of a document, which is no log and is not unpacked.
+_DOCUMENT = b"%PDF"
 #: Share of high bytes above which a Western code page is not taken for granted [1]:
 #: a log in cp1252 holds a few degree signs and accents, not running text.
 _FEW_HIGH_BYTES = 0.05
@@ -57,13 +52,28 @@ class Text:
     notes: tuple[Caution, ...]
 
 
-def read_text(path: str | Path) -> Text:
+def read_text(path: str | Path, *, part: str | None = None) -> Text:
     """Read a file and decode it.
+
+    Parameters
+    ----------
+    path : str or Path
+        The file.
+    part : str or None
+        Name of the file in an archive, or of the sheet in a workbook.
+
+    Returns
+    -------
+    Text
 
     Raises
     ------
     LogUnreadable
         If the file is missing, empty, or not text.
+    QuestionForUser
+        If it is an archive of several files.
+    UsageError
+        If there is no part of the name given.
     """
     path = Path(path)
     file = str(path)
@@ -76,18 +86,17 @@ def read_text(path: str | Path) -> Text:
         raise LogUnreadable(what, file=file, remedy="Check the path of the log.") from None
     if not raw.strip(b" \t\r\n\0\xff\xfe\xef\xbb\xbf"):
         raise LogUnreadable("The file is empty.", file=file, remedy="Export the log again.")
-    text, encoding = _decode(raw, file)
-    notes: tuple[Caution, ...] = ()
-    if encoding not in ("utf-8", "utf-8-sig"):
-        notes = (Caution(code="encoding", level="note", text=f"The file was read as {encoding} text."),)
-    lines = text.replace("\r\n", "\n").replace("\r", "\n").rstrip("\x1a\n").split("\n")
-    return Text(
-        file=file,
-        name=path.name,
-        sha256=hashlib.sha256(raw).hexdigest(),
-        lines=tuple(lines),
-        notes=notes,
-    )
+    inside = unwrap(raw, part=part, file=file)
+    lines, notes = inside.lines, inside.notes
+    if lines is None:
+        text, encoding = _decode(inside.raw, file)
+        lines = tuple(text.replace("\r\n", "\n").replace("\r", "\n").rstrip("\x1a\n").split("\n"))
+        if encoding not in ("utf-8", "utf-8-sig"):
+            notes = (
+                *notes,
+                Caution(code="encoding", level="note", text=f"The file was read as {encoding} text."),
+            )
+    return Text(file=file, name=path.name, sha256=hashlib.sha256(raw).hexdigest(), lines=lines, notes=notes)
 
 
 def _decode(raw: bytes, file: str) -> tuple[str, str]:
@@ -97,9 +106,8 @@ def _decode(raw: bytes, file: str) -> tuple[str, str]:
                 return raw.decode(encoding), encoding
             except UnicodeDecodeError:
                 raise _not_text(file, "its byte-order mark does not fit the rest") from None
-    for start, what in _WRAPPED:
-        if raw.startswith(start):
-            raise _not_text(file, f"it is {what}")
+    if raw.startswith(_DOCUMENT):
+        raise _not_text(file, "it is a PDF document")
     head = raw[:4096]
     if b"\0" in head:
         for encoding, zeros in (("utf-16-le", head[1::2]), ("utf-16-be", head[0::2])):

@@ -4,8 +4,12 @@
 
     facts.py   log and bumps -> noise, and what the PV did after each bump, worked out once
     rule.py    one row of the table
+    shape.py   a quick look at all moves together: common response, a gain each, what is left over
+    load.py    one load step beside the moves
     record.py  checks of the record: the columns, the mode, is there a move at all
     answer.py  checks of the answer: its size, baseline, rows, resolution, ranges, hold
+    storage.py checks of how the PV came into the file: cycles, filters, archives, spikes
+    moves.py   checks across the moves: answered after they were made, alike, by nothing else
 """
 
 from __future__ import annotations
@@ -18,8 +22,10 @@ from pipeline.findings import Caution, worst_first
 from pipeline.settings import LoopSheet
 from pipeline.testquality.answer import ANSWER_RULES
 from pipeline.testquality.facts import gather
+from pipeline.testquality.moves import MOVE_RULES
 from pipeline.testquality.record import RECORD_RULES
 from pipeline.testquality.rule import Rule
+from pipeline.testquality.storage import STORAGE_RULES
 
 if TYPE_CHECKING:
     from pipeline.bumps import Bump
@@ -29,7 +35,7 @@ __all__ = ["RULES", "Quality", "Rule", "Verdict", "judge"]
 
 Verdict = Literal["use", "use with care", "do not use"]
 
-RULES: tuple[Rule, ...] = (*RECORD_RULES, *ANSWER_RULES)
+RULES: tuple[Rule, ...] = (*RECORD_RULES, *ANSWER_RULES, *STORAGE_RULES, *MOVE_RULES)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -2,11 +2,16 @@
 
 from __future__ import annotations
 
+from typing import TYPE_CHECKING
+
 import numpy as np
 
 from pipeline.findings import Level
-from pipeline.testquality.facts import Facts, straight_line
+from pipeline.testquality.facts import FEW, Answer, Facts, straight_line
 from pipeline.testquality.rule import PRACTICE, Found, Rule, unit_of
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
 
 #: PV move over noise: good, and poor [1].
 _RATIO_GOOD, _RATIO_POOR = 10.0, 5.0
@@ -16,6 +21,8 @@ _BASELINE_ROWS, _BASELINE_FEWEST = 30, 10
 _DRIFT_SHARE = 0.05
 #: Longest hole on the rise, as a share of it, and in rows for a log that is coarse anyway [1].
 _GAP_SHARE, _GAP_ROWS = 0.25, 5.0
+#: A hole that begins below the first share of an answer and ends above the second one hides its rise [1].
+_HIDDEN = (0.2, 0.63)
 #: Rows on the rise: enough, and too few for any fit [rows].
 _RISE_ROWS, _RISE_FEWEST = 8.0, 3.0
 #: Resolution as a share of the PV move: care, stop [1].
@@ -26,6 +33,9 @@ _AT_END = 0.002
 _FROZEN_ROWS, _FROZEN_RUNS = 9, 8.0
 #: Shortest hold [rows]; share of the travel in the last fifth of a hold that has not settled [1].
 _HOLD_ROWS, _LATE_SHARE = 10.0, 0.10
+#: A hold shorter than the dead time and so many lags, on a process whose dead time is at least this share of
+#: its lags, leaves them mixed [1]; how much longer to hold next time [1].
+_HOLD_LAGS, _HOLD_DEAD, _HOLD_WANTED = 1.0, 0.25, 3.0
 
 
 def _small(facts: Facts) -> Found:
@@ -101,18 +111,31 @@ def _gap(facts: Facts) -> Found:
     t = facts.log.t[known]
     holes = np.diff(t)
     worst = 0.0
+    whole = False
     for a in facts.answers:
         at = a.bump.moves[0].at_s
+        whole |= _hides_rise(t, facts.log.pv[known], a)
         near = (t[1:] > at) & (t[:-1] < at + 2.0 * a.rise_s)
         worst = max(worst, float(np.max(holes[near], initial=0.0)))
     limit = max(_GAP_SHARE * facts.rise_s, _GAP_ROWS * facts.log.interval)
-    if worst <= limit:
+    if worst <= limit and not whole:
         return None
     text = (
         f"No PV for {worst:.3g} s while it was answering a move (63 % of the answer takes "
         f"{facts.rise_s:.3g} s): the dead time is unknown by that much. Export again without gaps."
     )
-    return ("stop" if worst > max(facts.rise_s, limit) else "care"), worst, limit, text
+    return ("stop" if whole or worst > max(facts.rise_s, limit) else "care"), worst, limit, text
+
+
+def _hides_rise(t: NDArray[np.float64], pv: NDArray[np.float64], answer: Answer) -> bool:
+    """Tell whether one hole lies between the start of an answer and most of it."""
+    hold = np.flatnonzero((t >= answer.bump.moves[0].at_s) & (t <= answer.bump.end_s))
+    if hold.size < FEW or answer.travel <= 0.0:
+        return False
+    share = np.abs(pv[hold] - answer.before) / answer.travel
+    holes = np.diff(t[hold])
+    wide = holes > _GAP_ROWS * float(np.median(holes))
+    return bool(np.any(wide & (share[:-1] < _HIDDEN[0]) & (share[1:] > _HIDDEN[1])))
 
 
 def _samples(facts: Facts) -> Found:
@@ -223,6 +246,27 @@ def _frozen(facts: Facts) -> Found:
     return None
 
 
+def _too_short(facts: Facts) -> Found:
+    """A hold that ends while dead time and lag can still be traded for each other."""
+    shape = facts.shape
+    if shape is None:
+        return None
+    holds = [a.bump.end_s - a.bump.moves[-1].at_s for a in facts.answers]
+    hold = float(np.max(holds))
+    needed = shape.dead_time_s + _HOLD_LAGS * shape.order * shape.lag_s
+    if shape.dead_time_s < _HOLD_DEAD * shape.order * shape.lag_s or hold >= needed:
+        return None
+    return (
+        "care",
+        hold,
+        needed,
+        (
+            f"The moves are held for {hold:.3g} s, with a dead time near {shape.dead_time_s:.2g} s: too short to "
+            f"tell dead time, lag and gain apart. Repeat and hold for {_HOLD_WANTED * needed:.2g} s."
+        ),
+    )
+
+
 def _short_hold(facts: Facts) -> Found:
     short = [
         a for a in facts.answers if a.bump.end_s - a.bump.moves[-1].at_s < _HOLD_ROWS * facts.log.interval
@@ -273,5 +317,10 @@ ANSWER_RULES: tuple[Rule, ...] = (
     Rule(code="pv-at-range-end", source=PRACTICE, check=_pv_at_end),
     Rule(code="co-at-range-end", source="stay inside 10 to 90 % (common practice)", check=_co_at_end),
     Rule(code="frozen-pv", source=PRACTICE, check=_frozen),
+    Rule(
+        code="hold-too-short",
+        source="three to five lags after the dead time (common practice)",
+        check=_too_short,
+    ),
     Rule(code="short-hold", source="settled, or the slope plain (common practice)", check=_short_hold),
 )

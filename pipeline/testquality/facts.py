@@ -7,6 +7,8 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from pipeline.testquality.shape import Shape, look
+
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
@@ -91,6 +93,8 @@ class Facts:
         Smallest step between two PV values that occur [PV unit].
     travel, rise_s : float
         Medians over the answers; zero if there is none [PV unit, s].
+    shape : Shape or None
+        All moves explained together; None where there is too little.
     """
 
     log: Log
@@ -101,6 +105,7 @@ class Facts:
     resolution: float
     travel: float
     rise_s: float
+    shape: Shape | None
 
 
 def gather(log: Log, bumps: tuple[Bump, ...], sheet: LoopSheet) -> Facts:
@@ -125,6 +130,7 @@ def gather(log: Log, bumps: tuple[Bump, ...], sheet: LoopSheet) -> Facts:
     resolution = float(steps.min()) if steps.size else 0.0
     noise = _noise(t, pv, bumps, resolution)
     answers = tuple(a for b in bumps if b.used for a in [_answer(t, pv, b, noise)] if a is not None)
+    rise_s = float(np.median([a.rise_s for a in answers])) if answers else 0.0
     return Facts(
         log=log,
         bumps=bumps,
@@ -133,7 +139,8 @@ def gather(log: Log, bumps: tuple[Bump, ...], sheet: LoopSheet) -> Facts:
         noise=noise,
         resolution=resolution,
         travel=float(np.median([a.travel for a in answers])) if answers else 0.0,
-        rise_s=float(np.median([a.rise_s for a in answers])) if answers else 0.0,
+        rise_s=rise_s,
+        shape=look(t, pv, [a.bump for a in answers], noise=noise, rise_s=rise_s),
     )
 
 

@@ -16,6 +16,9 @@ from pipeline.settings import LoopSheet
 
 DATA = Path(__file__).parent.parent / "data"
 NOTHING = LoopSheet()
+SECONDS = LoopSheet.model_validate({"time": {"unit": "s"}})
+#: Logs whose times count 0, 1, 2 and say no unit: their origins say seconds.
+UNITLESS = {"heater_degF_three_bumps.csv"}
 
 
 def sheet(**tables):
@@ -59,7 +62,7 @@ REAL = [
 
 @pytest.mark.parametrize(("name", "clock", "pv", "co", "second", "rows"), REAL)
 def test_real_logs_read_right(name, clock, pv, co, second, rows):
-    log = read_log(DATA / name, sheet=NOTHING)
+    log = read_log(DATA / name, sheet=SECONDS if name in UNITLESS else NOTHING)
     assert (log.time_column.name, log.pv_column.name, log.co_column.name) == (clock, pv, co)
     assert log.rows == rows == log.t.size
     assert log.t[0] == 0.0
@@ -80,14 +83,13 @@ def test_real_values_are_the_written_ones():
 
 
 def test_real_units_and_doubts_are_named():
-    heater = read_log(DATA / "heater_degF_three_bumps.csv", sheet=NOTHING)
-    note = next(n for n in heater.notes if n.code == "time-unit-assumed")
+    box = read_log(DATA / "heated_box_step_test.csv", sheet=NOTHING)
+    note = next(n for n in box.notes if n.code == "time-unit-assumed")
     assert note.level == "care" and "[time] unit" in note.text
     two = read_log(DATA / "two_heaters_two_bumps.txt", sheet=NOTHING)
     assert two.pv_column.unit == "degC" and two.co_column.unit == "%"
     assert two.sp is not None and set(two.sp) == {23.0}
     assert "Temperature 2" in next(n.text for n in two.notes if n.code == "several-loops")
-    box = read_log(DATA / "heated_box_step_test.csv", sheet=NOTHING)
     assert next(n for n in box.notes if n.code == "header-longer").value == 13
 
 
@@ -109,7 +111,7 @@ def test_real_units_and_doubts_are_named():
 )
 @pytest.mark.parametrize("end", ["\n", "\r\n"])
 def test_layouts_give_one_log(tmp_path, header, row, end):
-    log = read_log(write(tmp_path / "log.csv", header.replace("\n", end), row=row, end=end), sheet=NOTHING)
+    log = read_log(write(tmp_path / "log.csv", header.replace("\n", end), row=row, end=end), sheet=SECONDS)
     t, co, pv = bump()
     np.testing.assert_array_equal(log.t, t)
     np.testing.assert_array_equal(log.co, co)
@@ -238,7 +240,9 @@ def test_mode_column(tmp_path):
 
 def test_sheet_names_the_columns(tmp_path):
     path = write(tmp_path / "log.csv", "a,b,c")
-    log = read_log(path, sheet=sheet(columns={"time": "a", "pv": 3, "co": "B"}, pv={"unit": "bar"}))
+    log = read_log(
+        path, sheet=sheet(columns={"time": "a", "pv": 3, "co": "B"}, pv={"unit": "bar"}, time={"unit": "s"})
+    )
     assert (log.pv_column.name, log.co_column.name, log.pv_column.unit) == ("c", "b", "bar")
     assert log.pv_column.reason == "named in the loop sheet"
     with pytest.raises(UsageError, match=r'Did you mean "Tunnel temp"'):
@@ -255,6 +259,14 @@ def test_equal_candidates_are_a_question_with_its_answer(tmp_path):
     assert '[columns] pv = "Temp A" or pv = "Temp B"' in str(caught.value)
     log = read_log(tmp_path / "log.csv", sheet=sheet(columns={"pv": "Temp B"}))
     assert log.pv_column.name == "Temp B" and log.co_column.name == "Valve"
+
+
+@pytest.mark.parametrize("header", ["Time,CO,PV", "t,CO,PV", ""])
+def test_times_that_count_rows_seconds_or_minutes_are_a_question(tmp_path, header):
+    path = write(tmp_path / "log.csv", header)
+    with pytest.raises(QuestionForUser, match=r"seconds, minutes or rows.*\[time\] unit"):
+        read_log(path, sheet=NOTHING)
+    np.testing.assert_array_equal(read_log(path, sheet=sheet(time={"unit": "min"})).t, 60.0 * bump()[0])
 
 
 def test_no_time_column(tmp_path):
@@ -382,5 +394,5 @@ def test_nothing_warns():
     with warnings.catch_warnings(record=True) as seen:
         warnings.simplefilter("always")
         for name, *_ in REAL:
-            read_log(DATA / name, sheet=NOTHING)
+            read_log(DATA / name, sheet=SECONDS if name in UNITLESS else NOTHING)
     assert not seen
