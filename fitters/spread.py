@@ -112,7 +112,7 @@ def _determined(fit: Fit) -> bool:
 
 
 def _missing(fit: Fit, scatter: float) -> float:
-    """Give what must be added to the gain's own uncertainty to reach the scatter; zero where noise explains it [1]."""
+    """Give what must be added to the gain's own uncertainty to reach the scatter; zero where noise explains it."""
     gain = fit.parameters[0]
     own = gain.stderr / abs(gain.value) if gain.value != 0.0 else np.inf
     return float(np.sqrt(scatter**2 - own**2)) if scatter > _WIDER * own else 0.0

@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from pipeline.testquality.shape import Shape, look
+from pipeline.testquality.shape import Shape, look, spikes
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -128,6 +128,9 @@ def gather(log: Log, bumps: tuple[Bump, ...], sheet: LoopSheet) -> Facts:
     # values one rounding error apart are one value
     steps = steps[steps > 1e-9 * max(float(np.ptp(distinct)), 1e-300)] if distinct.size > 1 else steps
     resolution = float(steps.min()) if steps.size else 0.0
+    noise = _noise(t, pv, bumps, resolution)
+    usual = ~spikes(pv, noise)
+    t, pv = t[usual], pv[usual]
     noise = _noise(t, pv, bumps, resolution)
     answers = tuple(a for b in bumps if b.used for a in [_answer(t, pv, b, noise)] if a is not None)
     rise_s = float(np.median([a.rise_s for a in answers])) if answers else 0.0

@@ -15,7 +15,7 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
 #: Share of the answer the PV may have made before the move, and standard errors that make it clear [1].
-_EARLY_SHARE, _EARLY_CLEAR = 0.03, 5.0
+_EARLY_SHARE, _EARLY_CLEAR = 0.03, 4.0
 #: Share of the answer by which the PV may go on before the move, for a level to be drawn on from it [1].
 _EARLY_STEADY = 0.05
 #: Share of the moves that must show it [1].
@@ -25,7 +25,7 @@ _EARLY_RISES, _EARLY_ROWS = 0.3, 3
 #: Size of a disturbance as a share of the answer: care, stop [1]: a fifth costs a quarter of the gain.
 _LOAD_CARE, _LOAD_STOP = 0.10, 0.75
 #: Share of what the moves leave over that a load step must not leave [1].
-_LOAD_LEAVES = 0.5
+_LOAD_LEAVES = 0.9
 #: Share of the PV that the moves must explain before the rest is looked at [1].
 _EXPLAINED = 0.8
 #: Gain of a reversal over the gain of a move that goes on, below which there is a dead band [1].

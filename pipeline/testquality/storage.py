@@ -22,13 +22,13 @@ _CYCLE_RISES, _CYCLE_ROWS = 0.3, 6.0
 #: Rows of a baseline from which a cycle or a filter can be told [rows]; periods tried.
 _CYCLE_FEWEST, _PERIODS = 24, 80
 #: Correlation of neighbouring rows above which noise was smoothed [1], and rows that show it [rows].
-_SMOOTH, _SMOOTH_ROWS = 0.85, 50
+_SMOOTH, _SMOOTH_ROWS = 0.8, 50
 #: Share of the moving rows on straight lines: care, stop [1].
 _JOINED_CARE, _JOINED_STOP = 0.10, 0.30
 #: Resolutions by which neighbours must differ to be moving, and may miss their line [1].
 _JOINED_MOVING, _JOINED_OFF = 4.0, 1.05
 #: Rows in line that are no chance, moving rows that show it, and lines beyond one a move that an archive makes.
-_JOINED_RUN, _JOINED_FEWEST, _JOINED_CORNERS = 3, 10, 3
+_JOINED_RUN, _JOINED_FEWEST, _JOINED_CORNERS = 3, 10, 2
 #: Share of rows that repeat the one before in a PV stored on change [1].
 _HELD = 0.5
 #: Smallest usual change over the median one: no small changes are stored [1].
@@ -166,7 +166,8 @@ def _on_change(facts: Facts) -> Found:
     known = np.isfinite(facts.log.pv)
     t, pv = facts.log.t[known], facts.log.pv[known]
     steps = np.abs(np.diff(pv))
-    real = steps[steps > 0.0]
+    # a change of the CO may have its row stored whatever the PV did
+    real = steps[(steps > 0.0) & (np.diff(facts.log.co[known]) == 0.0)]
     if real.size < 10 or facts.travel <= 0.0:
         return None
     held = float(np.mean(steps == 0.0))
