@@ -5,6 +5,7 @@ from __future__ import annotations
 from typing import TYPE_CHECKING
 
 import numpy as np
+from scipy.signal import lfilter
 
 from pipeline.testquality.facts import Facts
 from pipeline.testquality.rule import PRACTICE, Found, Rule
@@ -18,6 +19,12 @@ _BUSY = 0.2
 _SAME_SIGNAL = 0.9999
 #: Share of rows on which a measured PV changes at the least, where a set point does not [1].
 _MOVED_BY_HAND = 0.05
+#: Share of rows on which an output that is moved by hand stands still, and on which a measured value does [1].
+_HELD, _MOVES_ON = 0.95, 0.5
+#: Correlation with what a lag makes of the steps from which one column follows another [1]; lags tried.
+_FOLLOWS, _LAGS_TRIED = 0.95, 12
+#: Rows from which columns can be told by what they do.
+_FEWEST = 30
 #: Shares of rows with two PVs for one time: care, stop [1].
 _CONFLICTS_CARE, _CONFLICTS_STOP = 0.01, 0.10
 
@@ -56,6 +63,32 @@ def _wrong_column(facts: Facts) -> Found:
         (
             f'The PV "{log.pv_column.name}" does what the CO "{log.co_column.name}" does, row by row: it is '
             "the CO in another unit, or its feedback. Name the measured value with [columns] pv."
+        ),
+    )
+
+
+def _swapped(facts: Facts) -> Found:
+    """A PV that stands and steps like an output, and a CO that follows it like a measured value."""
+    log = facts.log
+    known = np.isfinite(log.pv)
+    pv, co = log.pv[known], log.co[known]
+    if pv.size < _FEWEST or np.ptp(pv) == 0.0 or np.ptp(co) == 0.0:
+        return None
+    if float(np.mean(np.diff(pv) == 0.0)) < _HELD or float(np.mean(np.diff(co) == 0.0)) > _MOVES_ON:
+        return None
+    followed = max(
+        abs(float(np.corrcoef(lfilter([1.0 - a], [1.0, -a], pv - pv[0]), co)[0, 1]))
+        for a in np.exp(-1.0 / np.geomspace(1.0, 0.2 * pv.size, _LAGS_TRIED))
+    )
+    if followed < _FOLLOWS:
+        return None
+    return (
+        "stop",
+        followed,
+        _FOLLOWS,
+        (
+            f'The PV "{log.pv_column.name}" holds its level and steps, and the CO "{log.co_column.name}" follows '
+            "it: PV and CO are swapped. Name them the other way round with [columns] pv and co."
         ),
     )
 
@@ -146,7 +179,7 @@ def _closed_loop(facts: Facts) -> Found:
 
 def _no_move(facts: Facts) -> Found:
     log = facts.log
-    if facts.bumps:
+    if facts.bumps or _swapped(facts) is not None:
         return None
     if float(np.ptp(log.co)) == 0.0:
         return (
@@ -200,6 +233,7 @@ RECORD_RULES: tuple[Rule, ...] = (
     Rule(code="closed-loop", source=PRACTICE, check=_closed_loop, needs_bumps=False),
     Rule(code="no-move", source=PRACTICE, check=_no_move, needs_bumps=False),
     Rule(code="no-usable-move", source=PRACTICE, check=_no_answer, needs_bumps=False),
+    Rule(code="columns-swapped", source=PRACTICE, check=_swapped, needs_bumps=False),
     Rule(code="wrong-column", source=PRACTICE, check=_wrong_column, needs_bumps=False),
     Rule(code="conflicting-rows", source=PRACTICE, check=_conflicts, needs_bumps=False),
     Rule(code="moves-left-out", source=PRACTICE, check=_left_out),
