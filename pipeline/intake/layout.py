@@ -11,7 +11,7 @@ import numpy as np
 from pipeline.errors import LogUnreadable, QuestionForUser
 from pipeline.findings import Caution
 from pipeline.intake.cells import decimal_mark, is_missing, is_number, is_stamp
-from pipeline.intake.header import COMMENT, data_share, read_header, split_cells
+from pipeline.intake.header import CELLS_LOOKED_AT, COMMENT, data_share, read_header, split_cells
 
 #: Letters of a bad cell that a message shows.
 _SHOWN = 20
@@ -21,6 +21,8 @@ _DELIMITERS = ("\t", ";", ",", "|", " ")
 _STRAY_SHARE = 0.01
 #: Share of numbers and times in a line from which it holds data [1], less where most lines have less.
 _MOSTLY = 0.51
+#: Fields a row may have [1]: whole plants are logged in fewer columns.
+_MOST_FIELDS = 20_000
 #: Lines looked at to decide on the layout: enough to outvote preambles and footers.
 _SAMPLE_LINES = 60
 
@@ -85,6 +87,12 @@ def find_layout(lines: Sequence[str], *, file: str, decimal: str | None = None) 
     tail = plain[len(plain) // 4 :]
     sample = [lines[i] for i in tail[:: max(1, len(tail) // _SAMPLE_LINES)]]
     delimiter, width = _find_delimiter(sample, lines, filled, file)
+    if width > _MOST_FIELDS:
+        raise LogUnreadable(
+            f"The rows hold {width} fields, more than any log has columns.",
+            file=file,
+            remedy="Export the log with a line for each sample: time, PV, CO.",
+        )
     first = _first_data(lines, plain, delimiter, width, sample)
     if first is None:
         raise _no_numbers(lines, filled, file)
@@ -114,7 +122,7 @@ def _find_delimiter(
         if not widths:
             continue
         width, votes = widths.most_common(1)[0]
-        cells = [c for row in rows if len(row) == width for c in row if not is_missing(c)]
+        cells = [c for row in rows if len(row) == width for c in row[:CELLS_LOOKED_AT] if not is_missing(c)]
         if width < 2 or not cells:
             continue
         good = sum(is_number(c) or is_stamp(c) for c in cells) / len(cells)

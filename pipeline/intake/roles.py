@@ -8,7 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Literal
 
 import numpy as np
 
@@ -27,6 +27,8 @@ _LEAD = 0.25
 _LOOP_LEAD = 1.0
 #: Points a pair must reach to be believed without a word from the user [1].
 _ENOUGH = 2.0
+#: Columns that come into question for one role [1]: the best by name and behaviour, where a log has hundreds.
+_CANDIDATES = 60
 #: Points for a PV that a lagged CO explains wholly [1].
 _FOLLOWS = 2.5
 
@@ -86,7 +88,8 @@ def assign_roles(
     QuestionForUser
         If two readings are equally good.
     """
-    names = {f.index: _named(f, fields) for f in fields}
+    gas = _speaks_of_a_gas(fields)
+    names = {f.index: read_name(f.name, f.unit, gas=gas) for f in fields}
     mode = mode or next((f for f in fields if names[f.index].role == "mode" and not f.empty), None)
     spoken_for = {f.index for f in (sp, mode) if f is not None}
     usable = [
@@ -118,11 +121,10 @@ def assign_roles(
     )
 
 
-def _named(field: Field, fields: Sequence[Field]) -> Named:
-    # "CO2" is a gas unless the log also speaks of PV2, SP2 or CO1
-    pairs = [tuple(words_of(f.name)[k : k + 2]) for f in fields for k in range(2)]
-    gas = not any(p in pairs for p in (("pv", "2"), ("sp", "2"), ("co", "1")))
-    return read_name(field.name, field.unit, gas=gas)
+def _speaks_of_a_gas(fields: Sequence[Field]) -> bool:
+    """Take "CO2" for a gas unless the log also speaks of PV2, SP2 or CO1."""
+    pairs = {tuple(words_of(f.name)[k : k + 2]) for f in fields for k in range(2)}
+    return pairs.isdisjoint({("pv", "2"), ("sp", "2"), ("co", "1")})
 
 
 def _may_be_signal(field: Field, named: Named) -> bool:
@@ -143,6 +145,7 @@ class _Pair:
 def _choose(
     for_pv: Sequence[Signal], for_co: Sequence[Signal], *, asked_pv: bool, asked_co: bool, file: str
 ) -> tuple[_Pair, list[Caution]]:
+    for_pv, for_co = _likely("pv", for_pv), _likely("co", for_co)
     follows, same = followed(for_pv, for_co)
     pv_points = [points("pv", s) for s in for_pv]
     co_points = [points("co", s) for s in for_co]
@@ -189,6 +192,12 @@ def _choose(
             )
         )
     return best, notes
+
+
+def _likely(role: Literal["pv", "co"], signals: Sequence[Signal]) -> Sequence[Signal]:
+    if len(signals) <= _CANDIDATES:
+        return signals
+    return sorted(signals, key=lambda s: -points(role, s))[:_CANDIDATES]
 
 
 def _first_loop(pairs: list[_Pair]) -> tuple[list[_Pair], Caution | None]:
