@@ -146,6 +146,9 @@ def _read(cell: str, thousands: str) -> tuple[float, str | None]:
         if not _THOUSANDS[thousands].match(digits):
             return np.nan, None
         digits = digits.replace(thousands, "")
+    digits = digits.replace(",", ".")
+    if digits.count(".") > 1:
+        return np.nan, None
     sign = "-" if found["sign"] in ("-", "\u2212") else ""
     unit = found["unit"].strip() if found["unit"] else None
-    return float(f"{sign}{digits.replace(',', '.')}{found['power'] or ''}"), unit
+    return float(f"{sign}{digits}{found['power'] or ''}"), unit
