@@ -33,8 +33,8 @@ if TYPE_CHECKING:
 #: Grids of one loop and of a batch, whose crossings and peaks lie near the loops' own frequencies.
 _FINE = Grid(per_decade=80, floor=0.02)
 _COARSE = Grid(per_decade=24, floor=0.15, reach=1e2)
-#: Steps in which a peak is closed in on: to rounding, and to a millionth of the peak.
-_EXACT, _NEAR = 34, 14
+#: Steps in which a peak is closed in on: to rounding, and to a part in ten thousand even of a sharp one.
+_EXACT, _NEAR = 34, 24
 
 
 @dataclass(frozen=True, kw_only=True)
