@@ -10,7 +10,7 @@ import numpy as np
 from pipeline.loop.metrics import noise_gain
 from pipeline.loop.stack import stack_loops
 from pipeline.loop.sweep import ALWAYS_FOLLOWED, Grid
-from pipeline.tuning.criteria import GainRange, gain_range
+from pipeline.tuning.criteria import NAMES, GainRange, gain_range
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -37,6 +37,9 @@ _SHARES = np.array([0.0, 0.03, 0.08, 0.14, 0.2, MOST_DERIVATIVE])
 #: Times tried first, and rounds of closer ones.
 _TIMES = {"PI": 24, "PD": 24, "PID": 14}
 _ROUNDS = 3
+#: Criteria that limit the speed and not the robustness, and the share of the speed that is as good [1].
+_SPEED_LIMITS = ("closed_loop_time", "crossover")
+_NEARLY_AS_FAST = 0.9
 #: How much closer together the next round's times are [1], and how far about the best the first
 #: round's derivative times go [share of the integral time].
 _CLOSER, _SHARE_STEP = 3.5, 0.06
@@ -48,11 +51,12 @@ _BETTER = 1.08
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Shape:
-    """Integral and derivative time [s] and the largest gain found for them [CO unit / PV unit]."""
+    """Integral and derivative time [s], the largest gain found for them [CO unit / PV unit], what limits it."""
 
     integral: float
     derivative: float
     gain: float
+    by: str = ""
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -160,12 +164,12 @@ def ranges(job: Job, criteria: Criteria, integral: Reals, derivative: Reals) -> 
     if loud.size == 0:
         return r
     # There the dead time must be followed on, which takes the gain to be known nearly.
-    found, high, low = r.high[loud], r.high.copy(), r.low.copy()
+    found, high, low, by = r.high[loud], r.high.copy(), r.low.copy(), r.high_by.copy()
     again = gain_range(
         loops.scaled(found, loud), criteria, _LOUD_GRID, noise=None if noise is None else noise[loud] * found
     )
-    high[loud], low[loud] = again.high * found, again.low * found
-    return replace(r, high=high, low=low)
+    high[loud], low[loud], by[loud] = again.high * found, again.low * found, again.high_by
+    return replace(r, high=high, low=low, high_by=by)
 
 
 def _loud(loops: LoopStack, high: Reals) -> NDArray[np.intp]:
@@ -219,7 +223,17 @@ def fastest(job: Job, criteria: Criteria) -> Shape | None:
     tops = [max(hill, key=job.speed) for hill in _hills(found)]
     if not tops or times.size == 1 or not all(np.isfinite(top.gain) for top in tops):
         return max(tops, key=job.speed, default=None)
-    return max((_closer(job, criteria, top, _step(times)) for top in tops), key=job.speed)
+    best = max((_closer(job, criteria, top, _step(times)) for top in tops), key=job.speed)
+    return _firmest(job, best, found) if best.by in _SPEED_LIMITS else best
+
+
+def _firmest(job: Job, best: Shape, found: list[Shape]) -> Shape:
+    """Where speed itself is limited, nearly the same speed can be had with much more gain: take that.
+
+    Integral action alone would answer as fast, but hold the process by nothing.
+    """
+    near = [s for s in found if job.speed(s) >= _NEARLY_AS_FAST * job.speed(best)]
+    return max([*near, best], key=lambda s: s.gain)
 
 
 def _hills(found: list[Shape]) -> list[list[Shape]]:
@@ -267,7 +281,12 @@ def _candidates(job: Job, criteria: Criteria, times: Reals, shares: Reals) -> li
         integral, derivative = np.full(t.size, np.inf), t
     r = ranges(job, criteria, integral, derivative)
     return [
-        Shape(integral=float(integral[k]), derivative=float(derivative[k]), gain=float(r.high[k]))
+        Shape(
+            integral=float(integral[k]),
+            derivative=float(derivative[k]),
+            gain=float(r.high[k]),
+            by=NAMES[int(r.high_by[k])] if r.high_by[k] >= 0 else "",
+        )
         for k in np.flatnonzero(~np.isnan(r.high))
     ]
 
