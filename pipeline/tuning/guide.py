@@ -12,8 +12,9 @@ from pipeline.loop.search import roots
 from pipeline.loop.simulate import step_numbers
 from pipeline.loop.stack import stack_loops
 from pipeline.loop.sweep import Grid, Sweep, frequency_grid, gain_crossings, past_at, sweep
+from pipeline.tuning.criteria import gain_range
 from pipeline.tuning.simulated import gain_within
-from pipeline.tuning.types import Criteria
+from pipeline.tuning.types import NO_CRITERIA, Criteria
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -152,6 +153,9 @@ def _points(model: ProcessModel, controller: Controller) -> dict[float, GuidePoi
     loop = stack_loops([model], [controller])
     s = sweep(loop, frequency_grid(loop, _GRID))
     wanted, gains = _candidates(s)
+    # Far up the dead time brings the phase round again and again, at gains that lose the loop.
+    stable = gains <= gain_range(loop, NO_CRITERIA, _GRID).high[0]
+    wanted, gains = wanted[stable], gains[stable]
     found: dict[float, GuidePoint | None] = dict.fromkeys(_CURVE.tolist())
     if gains.size == 0:
         return found
