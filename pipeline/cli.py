@@ -110,7 +110,9 @@ def _root(
 def read(
     log: Annotated[Path, typer.Argument(metavar="LOG", help="Log file.")],
     loop: Sheet = None,
+    out: Annotated[Path, typer.Option(metavar="DIR", help="Folder for the plot.")] = Path("reports"),
     as_json: AsJson = False,
+    no_report: Annotated[bool, typer.Option("--no-report", help="Draw no plot.")] = False,
 ) -> None:
     """Say what is understood of a log: columns, clock, units, gaps, bumps, test quality."""
     try:
@@ -123,6 +125,10 @@ def read(
             typer.echo(json.dumps(data, ensure_ascii=False, indent=2, allow_nan=False).encode())
         else:
             typer.echo(reading_text(found.log, found.bumps, found.quality))
+            if not no_report:
+                from pipeline.report import write_plot
+
+                typer.echo(f"Plot: {write_plot(found.log, found.bumps, out, log.stem)}")
     except Exception as error:
         _stop(_told(error, log))
 

@@ -40,7 +40,7 @@ if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from numpy.typing import NDArray
 
-    from pipeline.record import Record
+    from pipeline.record import BumpInfo, Record, Series
 
 INK = "#16324f"
 OUTPUT = "#b4541a"
@@ -136,9 +136,25 @@ def _gappy(values: tuple[float | None, ...]) -> NDArray[np.float64]:
 
 
 def _log(record: Record) -> Figure:
-    """PV with its fit, what is left over, and the CO, over the log."""
-    series = record.series
-    scale, unit = numbers.time_unit(record.log.span_s)
+    return traces(record.series, record.bumps, record.log.span_s)
+
+
+def traces(series: Series, bumps: tuple[BumpInfo, ...], span: float) -> Figure:
+    """Draw the PV with its fit, what is left over, and the CO, over the log.
+
+    Parameters
+    ----------
+    series : Series
+    bumps : tuple of BumpInfo
+    span : float
+        Length of the log [s].
+
+    Returns
+    -------
+    Figure
+        Not saved, not shown.
+    """
+    scale, unit = numbers.time_unit(span)
     t = np.asarray(series.t_s) / scale
     pv_unit, co_unit = series.pv_unit or "PV unit", series.co_unit or "CO unit"
     fitted = series.fitted is not None and series.residual is not None
@@ -147,7 +163,7 @@ def _log(record: Record) -> Figure:
     axes = _axes_of(figure, (3.0, 1.1, 1.2) if fitted else (3.0, 1.2))
     upper, lower = axes[0], axes[-1]
     for axis in axes:
-        for bump in record.bumps:
+        for bump in bumps:
             for move in bump.moves[:12]:  # a busy CO would fill the page with marks
                 axis.axvline(move.at_s / scale, color=BAND, linewidth=0.7, zorder=0)
     upper.plot(t, _gappy(series.pv), color=MEASURED, linewidth=0.9)
@@ -164,7 +180,7 @@ def _log(record: Record) -> Figure:
     lower.margins(y=0.15)
     lower.locator_params(axis="y", nbins=4)
     _name_axis(lower, f"CO [{co_unit}]", OUTPUT)
-    for bump in record.bumps:
+    for bump in bumps:
         if not bump.used:
             for axis in axes:
                 axis.axvspan(

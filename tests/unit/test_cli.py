@@ -2,6 +2,7 @@
 
 import json
 import re
+import shutil
 import subprocess
 import sys
 from pathlib import Path
@@ -265,6 +266,9 @@ def test_read_says_what_was_understood(run):
     done = run("read", "log.csv")
     assert done.exit_code == 0, done.output
     assert "300 rows" in done.stdout and "TT-101" in done.stdout and "40 to 45 at 100 s" in done.stdout
+    assert [p.name for p in Path("reports").iterdir()] == ["log_log.png"]
+    assert Path("reports/log_log.png").read_bytes()[:4] == b"\x89PNG"
+    shutil.rmtree("reports")
     data = json.loads(run("read", "log.csv", "--json").stdout)
     assert data["log"]["columns"]["co"]["name"] == "TIC-101.OUT"
     assert data["bumps"][0]["moves"][0] == {"at_s": 100.0, "from": 40.0, "to": 45.0}
