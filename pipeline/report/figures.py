@@ -159,7 +159,7 @@ def traces(series: Series, bumps: tuple[BumpInfo, ...], span: float) -> Figure:
     pv_unit, co_unit = series.pv_unit or "PV unit", series.co_unit or "CO unit"
     fitted = series.fitted is not None and series.residual is not None
     figure = Figure(figsize=(_WIDTH, 4.0 if fitted else 3.1))
-    figure.subplots_adjust(left=0.085, right=0.985, top=0.94, bottom=0.11)
+    figure.subplots_adjust(left=0.085, right=0.985, top=0.94, bottom=0.11 if fitted else 0.14)
     axes = _axes_of(figure, (3.0, 1.1, 1.2) if fitted else (3.0, 1.2))
     upper, lower = axes[0], axes[-1]
     for axis in axes:
