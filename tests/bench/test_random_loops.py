@@ -21,7 +21,7 @@ from pipeline.tuning.types import Criteria
 pytestmark = pytest.mark.bench
 
 LOOPS = 2000
-TUNED = 500
+TUNED = 2000
 KINDS = ("P", "I", "PI", "PD", "PID")
 
 

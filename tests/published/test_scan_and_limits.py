@@ -36,7 +36,7 @@ def test_half_a_scan_counts_as_dead_time(scan, gain_margin, phase_margin, peak, 
     ("ratio", "lead"), [(2.0, 29.74), (5.0, 38.88), (8.0, 41.24), (10.0, 42.02), (20.0, 43.53)]
 )
 def test_a_filtered_derivative_leads_by_less_than_45_degrees(ratio, lead):
-    # Closed form at one over the derivative time, recomputed; filters of a tenth or less: Bequette (2003), sec. 5.4.
+    # Closed form at one over the derivative time, recomputed; a tenth or less: Bequette (2003), sec. 5.4.
     c = Controller(kind="PD", gain=1.0, action="reverse", derivative_time=3.0, derivative_filter=3.0 / ratio)
     feedback, _ = controller_response(c, [1.0 / 3.0])
     assert np.degrees(np.angle(feedback[0])) == pytest.approx(lead, abs=6e-3)
