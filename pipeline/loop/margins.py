@@ -11,6 +11,7 @@ import numpy as np
 from pipeline.loop.search import minima
 from pipeline.loop.stack import LoopStack, stack_loops
 from pipeline.loop.sweep import (
+    FINE,
     Crossings,
     Grid,
     Sweep,
@@ -30,8 +31,7 @@ if TYPE_CHECKING:
 
     Reals = NDArray[np.float64]
 
-#: Grids of one loop and of a batch, whose crossings and peaks lie near the loops' own frequencies.
-_FINE = Grid(per_decade=80, floor=0.02)
+#: Grid of a batch, whose crossings and peaks lie near the loops' own frequencies.
 _COARSE = Grid(per_decade=24, floor=0.15, reach=1e2)
 #: Steps in which a peak is closed in on: to rounding, and to a part in ten thousand even of a sharp one.
 _EXACT, _NEAR = 34, 24
@@ -77,7 +77,7 @@ def margins(model: ProcessModel, controller: Controller) -> Margins:
 
 def margins_of(loops: LoopStack) -> Margins:
     """Give every margin of a one-row stack; see `margins`."""
-    s = sweep(loops, frequency_grid(loops, _FINE))
+    s = sweep(loops, frequency_grid(loops, FINE))
     gains, phases = gain_crossings(s), phase_crossings(s)
     listed = _list(gains, phases)
     if unstable_roots(s)[0] > 0.5:

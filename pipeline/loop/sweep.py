@@ -85,6 +85,10 @@ class Grid:
     reach: float = 1e3
 
 
+#: Of one loop whose answer is shown: crossings and peaks are refined from here to rounding.
+FINE = Grid(per_decade=80, floor=0.02)
+
+
 def frequency_grid(loops: LoopStack, grid: Grid) -> Reals:
     """Build a grid on the loops' own scale.
 

@@ -9,7 +9,7 @@ import numpy as np
 
 from pipeline.loop.metrics import noise_gain
 from pipeline.loop.stack import stack_loops
-from pipeline.loop.sweep import Grid
+from pipeline.loop.sweep import FINE
 from pipeline.tuning.criteria import NAMES, gain_range
 from pipeline.tuning.simulated import gain_within
 from pipeline.tuning.types import NO_CRITERIA
@@ -17,7 +17,6 @@ from pipeline.tuning.types import NO_CRITERIA
 if TYPE_CHECKING:
     from pipeline.tuning.types import Criteria, Tuning
 
-_GRID = Grid(per_decade=80, floor=0.02)
 #: Criteria only a simulation can judge.
 _SIMULATED = ("overshoot", "co_peak")
 
@@ -60,14 +59,14 @@ def allowed_gains(tuning: Tuning, criteria: Criteria) -> tuple[Allowed, ...]:
 def _by_frequency(tuning: Tuning, only: Criteria) -> float | None:
     c = tuning.controller
     noise = None if only.noise_gain is None else np.array([noise_gain(c)])
-    r = gain_range(stack_loops([tuning.model], [c]), only, _GRID, noise=noise, exact=True)
+    r = gain_range(stack_loops([tuning.model], [c]), only, FINE, noise=noise, exact=True)
     return None if np.isnan(r.high[0]) else c.gain * float(r.high[0])
 
 
 def _simulated(tuning: Tuning, only: Criteria) -> float | None:
     """Follow the criterion up to just below the stability limit, from there down."""
     c = tuning.controller
-    limit = gain_range(stack_loops([tuning.model], [c]), NO_CRITERIA, _GRID, exact=True)
+    limit = gain_range(stack_loops([tuning.model], [c]), NO_CRITERIA, FINE, exact=True)
     top = float(limit.high[0])
     if not np.isfinite(top):
         return None

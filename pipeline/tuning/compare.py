@@ -12,6 +12,7 @@ from pipeline.loop.simulate import overshoot
 from pipeline.loop.stack import stack_loops
 from pipeline.tuning import rules
 from pipeline.tuning.reduced import first_order, ultimate
+from pipeline.tuning.search import filter_time
 
 if TYPE_CHECKING:
     from fitters.process import ProcessModel
@@ -156,5 +157,5 @@ def _controller(pattern: Controller, action: Action, s: rules.Settings, ratio: f
         action=action,
         integral_time=s.integral,
         derivative_time=s.derivative,
-        derivative_filter=s.derivative / ratio,
+        derivative_filter=filter_time(s.derivative, ratio, None),
     )

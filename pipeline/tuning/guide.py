@@ -11,7 +11,7 @@ from pipeline.loop.margins import margin_table, margins
 from pipeline.loop.search import roots
 from pipeline.loop.simulate import step_numbers
 from pipeline.loop.stack import stack_loops
-from pipeline.loop.sweep import Grid, Sweep, frequency_grid, gain_crossings, past_at, sweep
+from pipeline.loop.sweep import FINE, Sweep, frequency_grid, gain_crossings, past_at, sweep
 from pipeline.tuning.criteria import gain_range
 from pipeline.tuning.simulated import gain_within
 from pipeline.tuning.types import NO_CRITERIA, Criteria
@@ -42,7 +42,6 @@ _DOMINANT = 1.0
 #: An integral time of less than so many dead times is short on an integrating process [1]:
 #: Skogestad (2003), J. Process Control 13, 291-309, takes 8 at a closed-loop time of one dead time.
 _SHORT_INTEGRAL = 14.25
-_GRID = Grid(per_decade=80, floor=0.02)
 #: A gain has the phase margin wanted if no other crossover is nearer [degrees].
 _MET = 0.01
 
@@ -151,10 +150,10 @@ def margin_guide(
 def _points(model: ProcessModel, controller: Controller) -> dict[float, GuidePoint | None]:
     """Find the fastest gain for every margin of the curve: all candidates from one sweep, judged at once."""
     loop = stack_loops([model], [controller])
-    s = sweep(loop, frequency_grid(loop, _GRID))
+    s = sweep(loop, frequency_grid(loop, FINE))
     wanted, gains = _candidates(s)
     # Far up the dead time brings the phase round again and again, at gains that lose the loop.
-    stable = gains <= gain_range(loop, NO_CRITERIA, _GRID).high[0]
+    stable = gains <= gain_range(loop, NO_CRITERIA, FINE).high[0]
     wanted, gains = wanted[stable], gains[stable]
     found: dict[float, GuidePoint | None] = dict.fromkeys(_CURVE.tolist())
     if gains.size == 0:
@@ -163,7 +162,7 @@ def _points(model: ProcessModel, controller: Controller) -> dict[float, GuidePoi
     loops = loop.scaled(gains, row)
     table = margin_table(loops)
     crossings = np.bincount(
-        gain_crossings(sweep(loops, frequency_grid(loops, _GRID))).row, minlength=gains.size
+        gain_crossings(sweep(loops, frequency_grid(loops, FINE))).row, minlength=gains.size
     )
     good = table.stable & (np.abs(table.phase_margin - wanted) < _MET)
     for k in np.flatnonzero(good)[np.argsort(gains[good])]:

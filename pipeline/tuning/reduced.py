@@ -10,7 +10,7 @@ import numpy as np
 from pipeline.loop.forms import action_for_model
 from pipeline.loop.margins import margins
 from pipeline.loop.stack import stack_loops
-from pipeline.loop.sweep import Grid
+from pipeline.loop.sweep import FINE
 from pipeline.loop.types import Controller
 from pipeline.tuning.criteria import gain_range
 from pipeline.tuning.types import NO_CRITERIA
@@ -18,7 +18,6 @@ from pipeline.tuning.types import NO_CRITERIA
 if TYPE_CHECKING:
     from fitters.process import ProcessModel
 
-_GRID = Grid(per_decade=80, floor=0.02)
 #: Poles this far off the real axis ring, and no half rule is for them [share of their size].
 _REAL = 1e-3
 
@@ -115,7 +114,7 @@ def ultimate(model: ProcessModel) -> Ultimate | None:
         None where no gain makes the loop oscillate, or none makes it stable.
     """
     p = Controller(kind="P", gain=1.0, action=action_for_model(model))
-    limit = float(gain_range(stack_loops([model], [p]), NO_CRITERIA, _GRID, exact=True).high[0])
+    limit = float(gain_range(stack_loops([model], [p]), NO_CRITERIA, FINE, exact=True).high[0])
     if not np.isfinite(limit):
         return None
     m = margins(model, Controller(kind="P", gain=0.5 * limit, action=p.action))

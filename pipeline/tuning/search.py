@@ -9,7 +9,7 @@ import numpy as np
 
 from pipeline.loop.metrics import noise_gain
 from pipeline.loop.stack import stack_loops
-from pipeline.loop.sweep import ALWAYS_FOLLOWED, Grid
+from pipeline.loop.sweep import ALWAYS_FOLLOWED, FINE, Grid
 from pipeline.tuning.criteria import NAMES, GainRange, gain_range
 
 if TYPE_CHECKING:
@@ -25,10 +25,9 @@ if TYPE_CHECKING:
 #: A derivative time above a quarter of the integral time has no series equation, so no
 #: controller of that kind could be set to it.
 MOST_DERIVATIVE = 0.25
-#: Grids of the search and of the final answer.
+#: Grid of the search.
 SEARCH_GRID = Grid(per_decade=20, floor=np.inf, reach=1e2)
 _LOUD_GRID = replace(SEARCH_GRID, floor=0.25)
-_FINAL_GRID = Grid(per_decade=80, floor=0.02)
 #: Integral times of a PI lie between the first share of the fastest and the second of the sum of
 #: the loop's own times [1].
 _SHORTEST, _LONGEST = 0.1, 60.0
@@ -197,7 +196,7 @@ def ends(job: Job, near: Controller, criteria: Criteria) -> GainRange:
     r = gain_range(
         stack_loops([job.model], [near]),
         criteria,
-        _FINAL_GRID,
+        FINE,
         noise=_noise([near], criteria),
         exact=True,
     )

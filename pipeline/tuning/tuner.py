@@ -170,7 +170,6 @@ def _tuned(job: Job, criteria: Criteria) -> Tuning:
         prediction=predict(job.model, controller),
         binding=binding,
         reached=reached,
-        lowest_gain=low if np.isfinite(low) else 0.0,
         remarks=tuple(remarks),
     )
 
@@ -251,6 +250,5 @@ def _without_settings(job: Job, remarks: list[Caution]) -> Tuning:
         prediction=predict(job.model, controller),
         binding="phase_margin",
         reached=False,
-        lowest_gain=0.0,
         remarks=tuple(remarks),
     )

@@ -82,8 +82,6 @@ class Tuning:
         Criterion that set the gain, by its name in `Criteria`.
     reached : bool
         False when some criterion cannot be met at any gain; the settings then are the best reachable.
-    lowest_gain : float
-        Lower end of the gains that keep the criteria at these times; zero without one [CO unit / PV unit].
     remarks : tuple of Caution
         What the reader must know about how these settings came about.
     """
@@ -94,7 +92,6 @@ class Tuning:
     prediction: Prediction
     binding: str
     reached: bool
-    lowest_gain: float
     remarks: tuple[Caution, ...]
 
 
